@@ -1,0 +1,118 @@
+"""What happens within one pairing: reference events, and which of them belong together."""
+
+from __future__ import annotations
+
+from collections.abc import Iterator
+
+import numpy as np
+from msgspec import Struct
+
+from rigctl.errors import InputError
+from rigctl.protocol.schema import Pairings, RandomDt, Repeat
+
+_MS = 1_000_000
+
+
+class Pattern(Struct, frozen=True):
+    """Reference events of one pairing, ns from its own zero; ``pairs`` are (pre, post) indices."""
+
+    pre_ns: tuple[int, ...]
+    post_ns: tuple[int, ...]
+    pairs: tuple[tuple[int, int], ...]
+
+
+def to_ns(ms: float) -> int:
+    """Return milliseconds as integer nanoseconds."""
+    return round(ms * _MS)
+
+
+def pattern_of(block: Pairings, dt_ms: float | None, where: str, path: str) -> Pattern:
+    """Return the pattern of a block; ``dt_ms`` stands in for a Δt drawn or given by an arm."""
+    pairs: tuple[tuple[int, int], ...] | None = None
+    if block.spike_pairs is not None:
+        pairs = tuple((i - 1, j - 1) for i, j in block.spike_pairs)
+    if block.pre_at_ms is not None and block.post_at_ms is not None:
+        pre = [to_ns(t) for t in block.pre_at_ms]
+        post = [to_ns(t) for t in block.post_at_ms]
+    else:
+        assert dt_ms is not None
+        pre = _train(0.0, block.pre_count, block.pre_rate_hz)
+        post = _train(dt_ms, block.post_count, block.post_rate_hz)
+    if pairs is None:
+        pairs = _usual_pairs(len(pre), len(post), where, path)
+    else:
+        for i, j in pairs:
+            if not (0 <= i < len(pre) and 0 <= j < len(post)):
+                raise InputError.at(
+                    where,
+                    f"{path}.spike_pairs",
+                    [i + 1, j + 1],
+                    f"[pre 1..{len(pre)}, post 1..{len(post)}] is needed",
+                )
+    if block.deliver == "pre":
+        post, pairs = [], ()
+    elif block.deliver == "post":
+        pre, pairs = [], ()
+    pattern = Pattern(tuple(pre), tuple(post), pairs)
+    for repeat in block.repeat:
+        pattern = _repeated(pattern, repeat)
+    return pattern
+
+
+def _train(first_ms: float, count: int, rate_hz: float | None) -> list[int]:
+    interval_ms = 1000 / rate_hz if rate_hz else 0.0
+    return [to_ns(first_ms + n * interval_ms) for n in range(count)]
+
+
+def _usual_pairs(pre: int, post: int, where: str, path: str) -> tuple[tuple[int, int], ...]:
+    """Equal numbers pair one to one; a single event pairs with each of the other side."""
+    if pre == post:
+        return tuple((n, n) for n in range(pre))
+    if pre == 1:
+        return tuple((0, n) for n in range(post))
+    if post == 1:
+        return tuple((n, 0) for n in range(pre))
+    if 0 in (pre, post):
+        return ()
+    raise InputError(
+        f"{where}: {path}.spike_pairs: needed, since {pre} pre and {post} post events can be "
+        "paired in more than one way."
+    )
+
+
+def _repeated(pattern: Pattern, repeat: Repeat) -> Pattern:
+    every_ns = to_ns(repeat.every_ms if repeat.every_ms else 1000 / (repeat.rate_hz or 1))
+    pre: list[int] = []
+    post: list[int] = []
+    pairs: list[tuple[int, int]] = []
+    for n in range(repeat.times):
+        pairs += [(i + len(pre), j + len(post)) for i, j in pattern.pairs]
+        pre += [t + n * every_ns for t in pattern.pre_ns]
+        post += [t + n * every_ns for t in pattern.post_ns]
+    return Pattern(tuple(pre), tuple(post), tuple(pairs))
+
+
+def random_dts_ms(random: RandomDt, seed: int, stream: int) -> Iterator[float]:
+    """Yield Δt, uniform between the bounds without the middle, to the microsecond."""
+    rng = np.random.default_rng([seed, stream])
+    while True:
+        for dt_ms in np.round(rng.uniform(random.low_ms, random.high_ms, 256), 3):
+            if abs(dt_ms) >= random.min_abs_ms and dt_ms != 0:
+                yield float(dt_ms)
+
+
+def interval_ns(block: Pairings) -> int:
+    """Return the time from one pairing to the next (0 for a single one without a rate)."""
+    if block.every_s is not None:
+        return round(block.every_s * 1e9)
+    return round(1e9 / block.rate_hz) if block.rate_hz else 0
+
+
+def events_per_pairing(block: Pairings) -> int:
+    """Return how many triggers one pairing has, without expanding it."""
+    pre = len(block.pre_at_ms) if block.pre_at_ms is not None else block.pre_count
+    post = len(block.post_at_ms) if block.post_at_ms is not None else block.post_count
+    times = 1
+    for repeat in block.repeat:
+        times *= repeat.times
+    return (pre + post) * times + (1 if block.step else 0)

@@ -1,0 +1,3 @@
+"""The record of a session: one SQLite file, event-sourced, chained, closed."""
+
+RECORD_VERSION = 1

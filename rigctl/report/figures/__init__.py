@@ -1,0 +1,1 @@
+"""The figures of the page, A to G; each module draws what belongs together."""

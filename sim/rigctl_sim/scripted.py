@@ -1,0 +1,176 @@
+"""The scripted cell: spikes are drawn or planted, the trace is a sum of templates.
+
+A spike pulse evokes one spike at the line's latency plus creep plus jitter; or none, or two. Creep
+grows linearly with the count of spike pulses and stays at its full value after ``creep_over``.
+EPSPs never fire it.
+"""
+
+from __future__ import annotations
+
+import heapq
+from collections import deque
+
+import numpy as np
+import numpy.typing as npt
+from msgspec import Struct
+
+from rigctl_sim.knobs import ScriptedKnobs
+from rigctl_sim.streams import stream, stream_key
+
+Floats = npt.NDArray[np.float64]
+
+# How long an event of each kind still shows in the trace.
+_EPSP_SHOWS_NS = 200_000_000
+_SPIKE_SHOWS_NS = 40_000_000
+_STEP_SHOWS_NS = 200_000_000
+_ARTEFACT_SHOWS_NS = 5_000_000
+_ARTEFACT_MS = 0.25
+_SPIKE_MV, _SPIKE_WIDTH_MS, _AFTER_MV, _AFTER_MS = 100.0, 0.35, 6.0, 8.0
+
+
+class PulseLine(Struct, frozen=True):
+    """What a line that drives post or step does to the cell."""
+
+    current_pa: float
+    evokes_spike: bool
+    latency_ns: int
+    latency_sd_ns: int
+
+
+class ScriptedCell:
+    """See :class:`rigctl_sim.interfaces.Cell`."""
+
+    def __init__(
+        self, knobs: ScriptedKnobs, lines: dict[str, PulseLine], creep_over: int, seed: int
+    ) -> None:
+        self._knobs = knobs
+        self._lines = lines
+        self._creep_over = max(2, knobs.creep_over or creep_over)
+        self._rng = stream(seed, "scripted cell")
+        self._noise_key = stream_key(seed, "recording noise")
+        self._pulses = 0
+        self._misses = frozenset(knobs.miss_at)
+        self._doublets = frozenset(knobs.doublet_at)
+        self._spikes: list[int] = []
+        self._next_own_ns: int | None = None
+        if knobs.spontaneous_hz > 0:
+            self._next_own_ns = self._own_interval_ns()
+        self._epsps: deque[tuple[int, float]] = deque()
+        self._shown_spikes: deque[int] = deque()
+        self._steps: deque[tuple[int, int, float]] = deque()
+        self._artefacts: deque[int] = deque()
+
+    def _own_interval_ns(self) -> int:
+        return round(self._rng.exponential(1e9 / self._knobs.spontaneous_hz))
+
+    def epsp(self, onset_ns: int, pathway: str, strength: float) -> None:
+        """An EPSP begins."""
+        self._epsps.append((onset_ns, strength * self._knobs.epsp_mv))
+
+    def current(self, at_ns: int, width_ns: int, line: str) -> None:
+        """A current pulse begins."""
+        pulse = self._lines[line]
+        self._steps.append((at_ns, width_ns, pulse.current_pa))
+        if not pulse.evokes_spike:
+            return
+        self._pulses += 1
+        knobs = self._knobs
+        miss, double, jitter = self._rng.random(), self._rng.random(), self._rng.standard_normal()
+        if self._pulses in self._misses or miss < knobs.miss_probability:
+            return
+        crept_ms = knobs.creep_ms * min(1.0, (self._pulses - 1) / (self._creep_over - 1))
+        latency_ns = (
+            pulse.latency_ns
+            + round((knobs.latency_offset_ms + crept_ms) * 1e6)
+            + round(jitter * pulse.latency_sd_ns)
+        )
+        peak_ns = at_ns + max(latency_ns, 300_000)
+        heapq.heappush(self._spikes, peak_ns)
+        if self._pulses in self._doublets or double < knobs.doublet_probability:
+            heapq.heappush(self._spikes, peak_ns + round(knobs.doublet_gap_ms * 1e6))
+
+    def artefact(self, at_ns: int, line: str) -> None:
+        """A stimulus artefact."""
+        self._artefacts.append(at_ns)
+
+    def advance(self, until_ns: int) -> int | None:
+        """Advance, or stop at the next spike."""
+        own_ns = self._next_own_ns
+        if (
+            own_ns is not None
+            and own_ns <= until_ns
+            and (not self._spikes or own_ns < self._spikes[0])
+        ):
+            self._next_own_ns = own_ns + max(2_000_000, self._own_interval_ns())
+            self._shown_spikes.append(own_ns)
+            return own_ns
+        if self._spikes and self._spikes[0] <= until_ns:
+            peak_ns = heapq.heappop(self._spikes)
+            self._shown_spikes.append(peak_ns)
+            return peak_ns
+        return None
+
+    def trace_mv(self, start_ns: int, n: int, rate_hz: float) -> Floats:
+        """Return what the amplifier shows."""
+        knobs = self._knobs
+        rng = np.random.default_rng([*self._noise_key, start_ns % (1 << 63)])
+        trace = rng.standard_normal(n, dtype=np.float32).astype(np.float64)
+        trace *= knobs.noise_mv
+        trace += knobs.rest_mv
+        per_ns = rate_hz / 1e9
+        per_ms = rate_hz / 1000
+
+        def stretch(at_ns: int, shows_ns: int) -> tuple[slice, Floats]:
+            """Return where an event shows and the ms since it began at each sample there."""
+            first = max(0, int(np.ceil((at_ns - start_ns) * per_ns)))
+            last = min(n, int((at_ns + shows_ns - start_ns) * per_ns))
+            since_ms = (np.arange(first, max(first, last)) - (at_ns - start_ns) * per_ns) / per_ms
+            return slice(first, max(first, last)), since_ms.astype(np.float64, copy=False)
+
+        for onset_ns, amplitude_mv in self._epsps:
+            where, ms = stretch(onset_ns, _EPSP_SHOWS_NS)
+            trace[where] += amplitude_mv * _epsp_shape(ms, knobs.rise_ms, knobs.decay_ms)
+        for at_ns, width_ns, current_pa in self._steps:
+            where, ms = stretch(at_ns, width_ns + _STEP_SHOWS_NS)
+            trace[where] += current_pa * self._step_shape(ms, width_ns / 1e6)
+        for at_ns in self._artefacts:
+            where, ms = stretch(at_ns, _ARTEFACT_SHOWS_NS)
+            trace[where] += knobs.artefact_mv * np.exp(-ms / _ARTEFACT_MS)
+        for peak_ns in self._shown_spikes:
+            where, ms = stretch(peak_ns - 2_000_000, _SPIKE_SHOWS_NS)
+            ms = ms - 2.0
+            shape = _SPIKE_MV * np.exp(-((ms / _SPIKE_WIDTH_MS) ** 2) / 2)
+            shape -= np.where(ms > 0, _AFTER_MV * (ms / _AFTER_MS) * np.exp(1 - ms / _AFTER_MS), 0)
+            trace[where] += shape
+        return trace
+
+    def _step_shape(self, ms: Floats, width_ms: float) -> Floats:
+        """Return mV per pA of a pulse through the series and the input resistance."""
+        knobs = self._knobs
+        tau_ms = knobs.membrane_tau_ms
+        charged = 1 - np.exp(-np.minimum(ms, width_ms) / tau_ms)
+        after = np.exp(-np.maximum(ms - width_ms, 0) / tau_ms)
+        shape: Floats = knobs.input_resistance_mohm * charged * after
+        shape = shape + knobs.series_resistance_mohm * (ms < width_ms)
+        return shape / 1000
+
+    def forget(self, before_ns: int) -> None:
+        """Drop what cannot show any more."""
+        while self._epsps and self._epsps[0][0] + _EPSP_SHOWS_NS < before_ns:
+            self._epsps.popleft()
+        while self._shown_spikes and self._shown_spikes[0] + _SPIKE_SHOWS_NS < before_ns:
+            self._shown_spikes.popleft()
+        while self._steps and sum(self._steps[0][:2]) + _STEP_SHOWS_NS < before_ns:
+            self._steps.popleft()
+        while self._artefacts and self._artefacts[0] + _ARTEFACT_SHOWS_NS < before_ns:
+            self._artefacts.popleft()
+
+
+def _epsp_shape(ms: Floats, rise_ms: float, decay_ms: float) -> Floats:
+    """Return a difference of exponentials with its peak at 1."""
+    if rise_ms == decay_ms:
+        decay_ms *= 1.0001
+    peak_ms = np.log(decay_ms / rise_ms) * rise_ms * decay_ms / (decay_ms - rise_ms)
+    peak = np.exp(-peak_ms / decay_ms) - np.exp(-peak_ms / rise_ms)
+    shape: Floats = (np.exp(-ms / decay_ms) - np.exp(-ms / rise_ms)) / peak
+    return shape
