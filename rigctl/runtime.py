@@ -22,8 +22,8 @@ from rigctl.session.sweeps import Sweep
 from rigctl.timing.feeder import Feeder
 from rigctl.timing.sync import ClockSync
 
-# Half of what the box allows: one frame may be lost and the next still comes in time.
-KEEP_ALIVE_NS = 125_000_000
+# The box allows 250 ms of silence: one frame may be lost and the next still comes in time.
+KEEP_ALIVE_NS = 100_000_000
 SYNC_EVERY_NS = 2_000_000_000
 UPLOAD_HORIZON_NS = 2_000_000_000
 UPLOAD_GUARD_NS = 15_000_000
@@ -102,7 +102,7 @@ class Runtime:
         while not self._done:
             now_ns = self._clock.now_ns()
             self._turn(now_ns)
-            data = self._wait(self._next_deadline_ns(now_ns))
+            data = self._idle(self._next_deadline_ns(now_ns))
             now_ns = self._clock.now_ns()
             if data:
                 self._hear(self._host.feed(data, now_ns))
@@ -110,6 +110,17 @@ class Runtime:
                 for sweep in self._acquisition.take():
                     self._take_sweep(sweep)
         self._link.close()
+
+    def _idle(self, until_ns: int) -> bytes:
+        """Wait for bytes or for something to be due; meanwhile only keep the box alive."""
+        while True:
+            due_ns = self._keep_alive_due_ns
+            data = self._wait(min(until_ns, due_ns))
+            now_ns = self._clock.now_ns()
+            if data or now_ns < due_ns or now_ns >= until_ns:
+                return data
+            self._host.keep_alive(now_ns)
+            self._send(now_ns)
 
     def _turn(self, now_ns: int) -> None:
         """Do everything that is due now, then send what it led to."""
@@ -162,7 +173,7 @@ class Runtime:
             self._take(inp.LinkLost(self._session_now(), what))
 
     def _next_deadline_ns(self, now_ns: int) -> int:
-        due = [now_ns + 1_000_000_000, self._keep_alive_due_ns]
+        due = [now_ns + 1_000_000_000]
         link_ns = self._host.deadline_ns()
         if link_ns is not None:
             due.append(link_ns)

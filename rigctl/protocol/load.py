@@ -80,31 +80,44 @@ def _refuse_not_finite(value: Any, where: str, path: str) -> None:
 def _sentence(message: str, raw: Any, where: str, cls: type[Any]) -> InputError:
     match = _AT.match(message)
     what = match["what"] if match else message
-    path = (match["path"] if match else None) or "$"
-    steps = _steps(path)
-    value, struct = _walk(raw, cls, steps)
+    steps = _name_entries(_steps((match["path"] if match else None) or "$"), raw, cls)
+    value, kind = _walk(raw, cls, steps)
     key = _shown(steps)
+    inside = f"{key}." if key else ""
     unknown = _UNKNOWN_KEY.match(what)
     if unknown:
-        known = _keys_of(struct)
-        word = unknown["key"]
-        inside = f"{key}." if key else ""
-        hint = nearest(word, known)
+        known = _keys_of(_resolve(kind, value))
+        hint = nearest(unknown["key"], known)
         return InputError(
-            f"{where}: {inside}{word}: there is no such key{hint or ''} "
-            f"Known here: {', '.join(known)}."
-            if hint
-            else f"{where}: {inside}{word}: there is no such key; known here: {', '.join(known)}."
+            f"{where}: {inside}{unknown['key']}: there is no such key"
+            f"{hint or ';'} {'Known' if hint else 'known'} here: {', '.join(known)}."
         )
     missing = _MISSING_KEY.match(what)
     if missing:
-        inside = f"{key}." if key else ""
         return InputError(f"{where}: {inside}{missing['key']}: this key is needed.")
-    if what.startswith("Invalid value"):
-        allowed = _tags(struct)
-        if allowed:
-            return InputError.at(where, key, value, f"one of {allowed} is needed")
+    if what.startswith("Invalid"):
+        # A tag is no field of any struct: the union that holds it knows the tags.
+        choices = _choices(kind) or _choices(_walk(raw, cls, steps[:-1])[1])
+        if choices:
+            return InputError.at(where, key, value, f"one of {choices} is needed")
     return InputError.at(where, key or "the file", value, _allowed(what))
+
+
+def _name_entries(steps: list[str | int], raw: Any, cls: type[Any]) -> list[str | int]:
+    """Put the key of the entry that does not convert where the decoder only says ``[...]``."""
+    named: list[str | int] = []
+    for step in steps:
+        if step == "...":
+            value, kind = _walk(raw, cls, named)
+            inner = _step_type(kind, step, value)
+            for key, entry in value.items():
+                try:
+                    msgspec.convert(entry, inner)
+                except msgspec.ValidationError:
+                    step = key
+                    break
+        named.append(step)
+    return named
 
 
 def _steps(path: str) -> list[str | int]:
@@ -123,15 +136,13 @@ def _shown(steps: list[str | int]) -> str:
     for step in steps:
         if isinstance(step, int):
             shown += f"[{step + 1}]"
-        elif step == "...":
-            shown += ".*"
         else:
             shown += f".{step}" if shown else step
     return shown
 
 
 def _walk(raw: Any, cls: Any, steps: list[str | int]) -> tuple[Any, Any]:
-    """Follow a path through the raw data and the types; return the value and its struct type."""
+    """Follow a path through the raw data and the types; return the value and its type."""
     value, kind = raw, cls
     for step in steps:
         kind = _step_type(kind, step, value)
@@ -139,8 +150,8 @@ def _walk(raw: Any, cls: Any, steps: list[str | int]) -> tuple[Any, Any]:
             if isinstance(value, list) and step < len(value):
                 value = value[step]
         elif isinstance(value, dict):
-            value = next(iter(value.values()), None) if step == "..." else value.get(step)
-    return value, _resolve(kind, value)
+            value = value.get(step)
+    return value, kind
 
 
 def _step_type(kind: Any, step: str | int, value: Any) -> Any:
@@ -185,40 +196,38 @@ def _keys_of(struct: Any) -> list[str]:
     return []
 
 
-def _tags(kind: Any) -> str:
-    """Return the tags or literal values that were possible, as text."""
-    members = get_args(kind)
-    tags = [
-        repr(m.__struct_config__.tag)
-        for m in members
-        if isinstance(m, type) and issubclass(m, msgspec.Struct)
-    ]
-    if not tags:
-        tags = [repr(m) for m in members if isinstance(m, str)]
-    return ", ".join(tags)
+def _choices(kind: Any) -> str:
+    """Return the tags or the literal words that a type allows, as text."""
+    words: list[str] = []
+    for member in get_args(kind):
+        if isinstance(member, str):
+            words.append(repr(member))
+        elif isinstance(member, type) and issubclass(member, msgspec.Struct):
+            if member.__struct_config__.tag is not None:
+                words.append(repr(member.__struct_config__.tag))
+        else:
+            words += [repr(word) for word in get_args(member) if isinstance(word, str)]
+    return ", ".join(words)
 
 
 _TYPES = {
-    "`float`": "a number",
-    "`int`": "a whole number",
-    "`str`": "text in quotes",
-    "`bool`": "true or false",
-    "`object`": "a table",
-    "`array`": "a list",
-    "`null`": "nothing",
+    "float": "a number",
+    "int": "a whole number",
+    "str": "text in quotes",
+    "bool": "true or false",
+    "object": "a table",
+    "array": "a list",
 }
 
 
 def _allowed(what: str) -> str:
     """Turn the decoder's words into the end of our sentence."""
-    got = what.find(", got ")
-    allowed = what[:got] if got >= 0 else what
-    allowed = allowed.replace("Expected ", "", 1)
+    allowed = what.partition(", got ")[0].replace("Expected ", "", 1)
     if "matching regex" in allowed:
         return "a name is needed: a letter, then letters, digits, _ or -, at most 32 in all"
-    for theirs, ours in _TYPES.items():
-        allowed = allowed.replace(theirs, ours)
-    allowed = allowed.replace(" | nothing", "").replace(" | ", " or ")
-    if allowed.startswith("Invalid enum value"):
-        return "not one of the allowed words"
-    return f"{allowed} is needed"
+
+    def ours(match: re.Match[str]) -> str:
+        types = [t for t in match[1].split(" | ") if t != "null"]
+        return " or ".join(_TYPES.get(t, t) for t in types)
+
+    return f"{re.sub('`([^`]*)`', ours, allowed)} is needed"

@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import contextlib
 import hashlib
 import sqlite3
 from collections.abc import Callable, Sequence
@@ -103,7 +104,10 @@ class SqliteSink:
             self.flush()
             if finished:
                 self._db.execute("PRAGMA wal_checkpoint(TRUNCATE)")
-                self._db.execute("PRAGMA journal_mode=DELETE")
+                # Whoever reads the record at this moment keeps the mode as it is; the file itself
+                # is whole either way.
+                with contextlib.suppress(sqlite3.OperationalError):
+                    self._db.execute("PRAGMA journal_mode=DELETE")
         except sqlite3.Error as error:
             raise RecordFailed(f"{self.path}: the record cannot be closed: {error}.") from None
         finally:

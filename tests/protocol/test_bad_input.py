@@ -1,0 +1,181 @@
+"""Files that cannot be used: one sentence with file, key path, value and what is allowed."""
+
+from __future__ import annotations
+
+import pytest
+
+from rigctl.errors import InputError
+from rigctl.protocol.compile import compile_plan
+from rigctl.protocol.load import parse_protocol, parse_rig
+from tests.conftest import RIG_TEXT, SHORT, make_plan, make_rig
+
+# (what to replace, by what, the sentence after "p.toml: ")
+PROTOCOL_CASES = [
+    (SHORT, "title = ", "not TOML: Invalid value (at end of document)."),
+    (SHORT, "  \n", "the file is empty; a protocol in TOML is needed."),
+    ('title = "short"', 'title = ""', "title = '': text in quotes of length >= 1 is needed."),
+    ('title = "short"', "title = 3", "title = 3: text in quotes is needed."),
+    ('title = "short"\n', "", "title: this key is needed."),
+    ('title = "short"', 'titel = "short"', 'titel: there is no such key; did you mean "title"?'),
+    ("pairings = 12", "parings = 12", 'phase[2].block[1].parings: there is no such key; did you '
+     'mean "pairings"?'),
+    ("pairings = 12\n", "", "phase[2].block[1].pairings: this key is needed."),
+    ("pairings = 12", "pairings = 0", "phase[2].block[1].pairings = 0: a whole number >= 1 is "
+     "needed."),
+    ("pairings = 12", "pairings = -3", "phase[2].block[1].pairings = -3: a whole number >= 1 is "
+     "needed."),
+    ("pairings = 12", "pairings = 2.5", "phase[2].block[1].pairings = 2.5: a whole number is "
+     "needed."),
+    ("pairings = 12", 'pairings = "12"', "phase[2].block[1].pairings = '12': a whole number is "
+     "needed."),
+    ("pairings = 12", "pairings = 10_000_000", "phase[2].block[1].pairings = 10000000: makes "
+     "20,000,000 triggers; a plan has at most 500,000."),
+    ("pairings = 12", "pairings = 99_000_000", "phase[2].block[1].pairings = 99000000: a whole "
+     "number <= 10000000 is needed."),
+    ("dt_ms = 10", "dt_ms = 0", "phase[2].block[1].dt_ms = 0.0: Δt = 0 has no order: give it a "
+     "sign, at least 0.001 ms."),
+    ("dt_ms = 10", "dt_ms = nan", "phase[2].block[1].dt_ms = nan: a finite number is needed."),
+    ("dt_ms = 10", "dt_ms = inf", "phase[2].block[1].dt_ms = inf: a finite number is needed."),
+    ("dt_ms = 10", "dt_ms = 1e12", "phase[2].block[1].dt_ms = 1000000000000.0: a number <= "
+     "600000.0 is needed."),
+    ("dt_ms = 10", "dt_ms = true", "phase[2].block[1].dt_ms = True: a number is needed."),
+    ("dt_ms = 10\n", "", "phase[2].block[1]: give exactly one of dt_ms, dt_random, and pre_at_ms "
+     "with post_at_ms; given: none."),
+    ("dt_ms = 10", "dt_ms = 10\npre_at_ms = [0]\npost_at_ms = [5]", "phase[2].block[1]: give "
+     "exactly one of dt_ms, dt_random, and pre_at_ms with post_at_ms; given: dt_ms and "
+     "pre_at_ms/post_at_ms."),
+    ("dt_ms = 10", "pre_at_ms = [0]", "phase[2].block[1]: pre_at_ms and post_at_ms go together."),
+    ("dt_ms = 10", "pre_at_ms = [5, 5]\npost_at_ms = [9]", "phase[2].block[1].pre_at_ms = [5.0, "
+     "5.0]: rising times are needed."),
+    ("dt_ms = 10", "pre_at_ms = [0, 9]\npost_at_ms = [1, 2, 3]", "phase[2].block[1].spike_pairs: "
+     "needed, since 2 pre and 3 post events can be paired in more than one way."),
+    ("dt_ms = 10", "pre_at_ms = [0]\npost_at_ms = [9]\nspike_pairs = [[1, 2]]",
+     "phase[2].block[1].spike_pairs[1] = [1, 2]: [pre 1..1, post 1..1] is needed."),
+    ("dt_ms = 10", "pre_at_ms = [0]\npost_at_ms = [0]\nspike_pairs = [[1, 1]]",
+     "phase[2].block[1].spike_pairs[1] = [1, 1]: Δt = 0 has no order: give it a sign, at least "
+     "0.001 ms."),
+    ("dt_ms = 10", "dt_random = { low_ms = 5, high_ms = 5 }",
+     "phase[2].block[1].dt_random.high_ms = 5.0: more than low_ms = 5 is needed."),
+    ("dt_ms = 10", "dt_random = { low_ms = -5, high_ms = 5, min_abs_ms = 6 }",
+     "phase[2].block[1].dt_random.min_abs_ms = 6.0: nothing between low_ms and high_ms is left."),
+    ("rate_hz = 1", "rate_hz = 1\nevery_s = 1", "phase[2].block[1]: give exactly one of rate_hz "
+     "and every_s."),
+    ("rate_hz = 1", "", "phase[2].block[1]: give exactly one of rate_hz and every_s."),
+    ("rate_hz = 1", "rate_hz = -1", "phase[2].block[1].rate_hz = -1: a number > 0.0 is needed."),
+    ("rate_hz = 1", "rate_hz = 200", "phase[2].block[1]: a pairing of 9.2 ms is not over when the "
+     "next begins, 5 ms after it; lower rate_hz or shorten the pattern."),
+    ("rate_hz = 1", "rate_hz = 1\npost_count = 3", "phase[2].block[1].post_rate_hz: needed with "
+     "post_count = 3."),
+    ("rate_hz = 1", "rate_hz = 1\npost_rate_hz = 30", "phase[2].block[1].post_rate_hz = 30.0: only "
+     "with post_count above 1."),
+    ("rate_hz = 1", "rate_hz = 1\npost_count = 3\npost_rate_hz = 600",
+     "phase[2].block[1]: a pulse on post1 at 10.867 ms of the phase begins inside another "
+     "(phase[2].block[1], 9.200 ms, 2 ms long); pulses on a line must not overlap."),
+    ("rate_hz = 1", "rate_hz = 1\nrepeat = [{ times = 3 }]", "phase[2].block[1].repeat[1]: give "
+     "exactly one of rate_hz and every_ms."),
+    ("rate_hz = 1", 'rate_hz = 1\npre_line = "pre3"', "phase[2].block[1].pre_line = 'pre3': "
+     'rig.toml has no output of that name driving pathway s1; did you mean "pre1"?.'),
+    ("rate_hz = 1", 'rate_hz = 1\npost_line = "nothing"', "phase[2].block[1].post_line = "
+     "'nothing': rig.toml has no such output that drives post."),
+    ('kind = "pairings"\npathway = "s1"', 'kind = "pairings"\npathway = "s3"',
+     "phase[2].block[1].pathway = 's3': rig.toml drives no such pathway, only s1, s2."),
+    ('kind = "pairings"\npathway = "s1"', 'kind = "pairings"\npathway = "1 bad"',
+     "phase[2].block[1].pathway = '1 bad': a name is needed: a letter, then letters, digits, _ or "
+     "-, at most 32 in all."),
+    ('kind = "pairings"', 'kind = "pairing"', "phase[2].block[1].kind = 'pairing': one of "
+     "'pairings', 'poisson', 'contingent' is needed."),
+    ('kind = "induction"', 'kind = "inductoin"', "phase[2].kind = 'inductoin': one of 'baseline', "
+     "'induction', 'follow_up' is needed."),
+    ('kind = "pairings"\n', "", "phase[2].block[1].kind: this key is needed."),
+    ("duration_min = 0.5", "", "phase[1].duration_min: this key is needed."),
+    ("duration_min = 0.5", "duration_min = 30", "phase[2]: the induction starts 31.00 min after "
+     "break-in; rig.toml allows 8 min (washout.start_by_min): shorten what comes before, or use an "
+     "access without that clock."),
+    ("first_at_s = 2", "first_at_s = 4", "phase[1].test[2].first_at_s = 4.0: less than every_s = 4 "
+     "is needed."),
+    ('kind = "induction"', 'kind = "induction"\nname = "baseline"', "phase[2].name = 'baseline': "
+     "two phases have this name."),
+    ('rule = "pair-all"', 'rule = "pair-al"', "forecast[1].rule = 'pair-al': pair-all or "
+     'pair-nearest is needed; did you mean "pair-all"?'),
+    ('rule = "pair-all"', 'rule = "calcium"', "forecast[1].rule = 'calcium': not in this version; "
+     "it runs pair-all and pair-nearest."),
+    ('set = "bi-poo-2001"', 'set = "bi-poo-2002"', "forecast[1].set = 'bi-poo-2002': no such "
+     'parameter set; did you mean "bi-poo-2001"?'),
+    ('set = "bi-poo-2001"', "a_plus = 0.1", None),
+]  # fmt: skip
+
+
+@pytest.mark.parametrize(("old", "new", "sentence"), PROTOCOL_CASES)
+def test_protocol(old: str, new: str, sentence: str | None) -> None:
+    assert old in SHORT
+    text = SHORT.replace(old, new, 1) if old != SHORT else new
+
+    def use() -> None:
+        protocol = parse_protocol(text, "p.toml")
+        compile_plan(protocol, make_rig(), protocol_file="p.toml", rig_file="rig.toml")
+
+    if sentence is None:
+        use()
+        return
+    with pytest.raises(InputError) as caught:
+        use()
+    assert str(caught.value).startswith(f"p.toml: {sentence}")
+    assert "\n" not in str(caught.value)
+    assert caught.value.exit_code == 2
+
+
+RIG_CASES = [
+    ('drives = "pre"', 'drives = "light"', "output.pre1.drives = 'light': one of 'pre', "
+     "'post', 'step' is needed."),
+    ('pathway = "s1"\nsocket', "socket", "output.pre1.pathway: needed for a line that drives pre."),
+    ("latency.epsp_onset = { mean_ms = 2.30, sd_ms = 0.15, n = 20 }\n", "", None),
+    ("mean_ms = 2.30", "mean_ms = -1", "output.pre1.latency.epsp_onset.mean_ms = -1"),
+    ('stimulus = "isolator_a"', 'stimulus = "isolator_c"', "output.pre1.stimulus = 'isolator_c': "
+     "no table [stimulus] of that name; did you mean"),
+    ('electrode = "bipolar"', 'electrode = "unipolar"', "stimulus.isolator_a.electrode = "
+     "'unipolar': no table [electrode] of that name"),
+    ("diameter_um = 125", "diameter_um = 125\narea_um2 = 5", "electrode.bipolar: give diameter_um "
+     "or area_um2, not both."),
+    ("width_us = 100\nstim", "width_us = 5\nstim", "output.pre1.width_us = 5.0: the box makes "
+     "pulses of at least 30 us."),
+    ("width_us = 100\nstim", "width_us = nan\nstim", "output.pre1.width_us = nan: a finite number"),
+    ("[input.spike1]", "[input.pre1]", "input.pre1: an output has this name already."),
+    ('access = "ruptured"', 'access = "open"', "access = 'open': "),
+]  # fmt: skip
+
+
+@pytest.mark.parametrize(("old", "new", "sentence"), RIG_CASES)
+def test_rig(old: str, new: str, sentence: str | None) -> None:
+    assert old in RIG_TEXT
+    if sentence is None:
+        rig = make_rig(replace={old: new})
+        with pytest.raises(InputError, match=r"rig.toml: output.pre1.latency.epsp_onset: needed"):
+            make_plan(rig=rig)
+        return
+    with pytest.raises(InputError) as caught:
+        parse_rig(RIG_TEXT.replace(old, new, 1), "rig.toml")
+    assert str(caught.value).startswith(f"rig.toml: {sentence}")
+
+
+def test_a_contingent_delay_under_what_detector_box_and_latency_allow_is_refused() -> None:
+    block = """kind = "contingent"
+pathway = "s1"
+on_input = "spike1"
+dt_ms = {dt}
+silence_ms = 300
+lockout_s = 1
+max_pairings = 5
+max_min = 1
+"""
+    start = SHORT.index('kind = "pairings"')
+    end = SHORT.index('[[phase]]\nkind = "follow_up"')
+
+    def plan(dt: float) -> None:
+        make_plan(SHORT[:start] + block.format(dt=dt) + "\n" + SHORT[end:])
+
+    # 0.15 ms detector + 0.1 ms box + 2.3 ms latency.
+    plan(-2.55)
+    with pytest.raises(InputError, match=r"allow Δt of −2.55 ms or longer"):
+        plan(-2.54)
+    with pytest.raises(InputError, match="a negative Δt is needed"):
+        plan(8)
