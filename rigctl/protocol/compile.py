@@ -178,7 +178,7 @@ class _Compiler:
         path = f"phase[{index + 1}]"
         builder = PhaseBuilder(
             self._rig.box.tick_ns,
-            round(max(self._rig.box.min_spacing_us, self._rig.limits.min_spacing_us) * 1000),
+            round(self._rig.box.min_spacing_us * 1000),
             self._window_ns,
             self._where,
         )

@@ -19,7 +19,9 @@ from rigctl.protocol.planned import PlannedSpike
 
 FARTHEST_MS = 20.0
 _SHARE = 0.1
-_DRAWS = 24
+# So many spikes are run in all for one value of jitter or misses: few spikes, many draws.
+_SPIKES_DRAWN = 8_000
+_DRAWS = (8, 400)
 _GRID_MS = 0.25
 _MOST_SPIKES = 4_000
 _NEAR_NS = 400_000_000
@@ -64,8 +66,9 @@ def sensitivity(choice: RuleChoice, spikes: list[PlannedSpike], pathway: str) ->
         return abs(value - base) >= _SHARE * abs(base) * (1 - 1e-9)
 
     rng = np.random.default_rng(0)
-    noise = rng.standard_normal((_DRAWS, len(post)))
-    chance = rng.random((_DRAWS, len(post)))
+    draws = min(max(_SPIKES_DRAWN // (len(pre) + len(post)), _DRAWS[0]), _DRAWS[1])
+    noise = rng.standard_normal((draws, len(post)))
+    chance = rng.random((draws, len(post)))
 
     def jittered(sd_ms: float) -> float:
         return float(np.mean([change(row * sd_ms * 1e6) for row in noise]))

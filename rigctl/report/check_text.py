@@ -181,26 +181,34 @@ def _pairs(found: Audit) -> Table:
 
 def percent(value: float) -> str:
     """Return a relative change in %, signed."""
-    return f"{100 * value:+.1f} %"
+    # Adding zero turns the minus zero that rounding leaves into plain zero.
+    return f"{round(100 * value, 1) + 0.0:+.1f} %"
 
 
-def _forecasts(found: Audit) -> Table:
-    table = _table(
-        "Forecast if delivered exactly", "rule, set", "pathway", "change", "intended pairs alone",
-        "tests add", "10 % more or less by",
-    )  # fmt: skip
+def _forecasts(found: Audit) -> Group:
+    """One paragraph for each paired pathway; the others only where they change at all."""
+    lines: list[RenderableType] = ["Forecast if delivered exactly"]
     for f in found.forecasts:
+        if f.sensitivity is None and abs(f.change) < 5e-4:
+            continue
         badge = f.preparation or "NO PREPARATION NAMED"
-        notes = f"\n{f.extrapolation}" if f.extrapolation else ""
-        table.add_row(
-            f"{f.rule}, {f.parameter_set}\n({badge}){notes}",
-            f.pathway,
-            percent(f.change),
-            percent(f.intended_only),
-            percent(f.change - f.without_tests),
-            sensitivity_words(f),
+        lines.append(
+            Text.assemble(
+                (f"{f.pathway}  {percent(f.change)}", "bold"),
+                f"  under {f.rule}, {f.parameter_set} ({badge})",
+            )
         )
-    return table
+        lines.append(
+            f"    intended pairs alone {percent(f.intended_only)}, other pairs add "
+            f"{percent(f.change - f.intended_only)}, test stimuli {percent(f.change - f.without_tests)}"
+        )
+        if f.sensitivity is not None:
+            lines.append(f"    moved by a tenth: {sensitivity_words(f)}")
+        if f.extrapolation:
+            lines.append(f"    EXTRAPOLATION: {f.extrapolation}")
+    if len(lines) == 1:
+        lines.append("    none: no pairing, or nothing within the rules' reach")
+    return Group(*lines)
 
 
 def sensitivity_words(f: ForecastAudit) -> str:
@@ -221,24 +229,55 @@ def sensitivity_words(f: ForecastAudit) -> str:
 
 
 def _washout(plan: Plan, found: Audit) -> list[RenderableType]:
+    """The budget from break-in on, a column a minute."""
     if not found.washout:
         return []
-    table = _table("Washout clock, from break-in", "minute", "what goes on", "")
+    clock = plan.washout
+    start_by, end_by = clock.get("start_by_ns"), clock.get("end_by_ns")
+    allowed = " and ".join(
+        f"{word} by minute {limit / 6e10:g}"
+        for word, limit in (("start", start_by), ("end", end_by))
+        if limit is not None
+    )
+    legend: dict[str, str] = {}
+    cells = []
     for minute in found.washout:
-        flag = {"late": "LATE (past the warning)", "over": "OVER"}.get(minute.flag, "")
-        table.add_row(f"{minute.minute - 1}–{minute.minute}", minute.what, flag)
-    return ["", table]
+        name = minute.what.split(" → ")[0]
+        letter = legend.setdefault(name, name[0] if name != "before the plan" else ".")
+        cells.append(letter.upper() if minute.flag == "late" else "!" if minute.flag else letter)
+    numbers = "".join(f"{m.minute:>3}" for m in found.washout)
+    keys = ", ".join(f"{letter} {name}" for name, letter in legend.items())
+    late = [m.minute for m in found.washout if m.flag]
+    flags = f"; from minute {late[0]} on late (capital)" if late else ""
+    return [
+        "",
+        f"Washout clock: an induction must {allowed} after break-in",
+        Text(f"minute {numbers}", overflow="fold"),
+        Text("       " + "".join(f"{c:>3}" for c in cells), overflow="fold"),
+        f"       {keys}{flags}",
+    ]
 
 
-def _limits(verdicts: list[Verdict]) -> Table:
-    table = _table("Limits", "", "line", "check", "value", "limit", "formula", "source")
-    for v in verdicts:
+def _limits(verdicts: list[Verdict]) -> Group:
+    """What is over or open first; then a line for each check, with sources as numbered notes."""
+    sources: dict[str, int] = {}
+    table = Table(box=None, pad_edge=False, padding=(0, 2, 0, 0), show_header=True)
+    for column in ("", "line", "check", "value", "limit", "formula, note"):
+        table.add_column(column, overflow="fold", no_wrap=column not in ("", "formula, note"))
+    for v in sorted(verdicts, key=lambda v: {False: 0, None: 1, True: 2}[v.ok]):
+        number = sources.setdefault(v.source, len(sources) + 1)
         mark = {True: "ok", False: "OVER", None: "not stated"}[v.ok]
-        value = "" if v.value is None else f"{v.value:.4g} {v.unit}"
-        limit = "" if v.limit is None else f"{v.limit:.4g} {v.unit}"
-        formula = f"{v.formula} ({v.note})" if v.note else v.formula
-        table.add_row(mark, v.line, v.name, value, limit, formula, v.source)
-    return table
+        value = "" if v.value is None else f"{_short(v.value)} {v.unit}"
+        limit = "" if v.limit is None else f"{_short(v.limit)} {v.unit}"
+        note = "; ".join(part for part in (v.formula, v.note) if part)
+        table.add_row(mark, v.line, v.name, value, limit, f"{note} \\[{number}]")
+    notes = [Text(f"  [{n}] {source}", style="dim") for source, n in sources.items()]
+    return Group("Limits", table, *notes)
+
+
+def _short(value: float) -> str:
+    """Return a number without exponent where a person would write it so."""
+    return f"{value:.4g}" if abs(value) < 1e4 else f"{value:,.0f}"
 
 
 def _not_stated(found: Audit) -> Group:

@@ -3,8 +3,8 @@
 The kinetics are those of Hodgkin & Huxley 1952, adapted, not published as a neuron:
 
 * sodium 60 and potassium 15 mS/cm² instead of 120 and 36, leak 0.04 mS/cm² with its reversal set so
-  that the cell rests at −70 mV: at the usual 100 pF that is an input resistance of about 90 MΩ
-  (measured by a −20 pA step) and a membrane time constant of about 10 ms;
+  that the cell rests at −70 mV: at the usual 100 pF that is an input resistance of about 88 MΩ
+  (measured by a −20 pA step) and a membrane time constant of about 8.5 ms;
 * all rates four times faster (about 19 °C at a Q10 of 3);
 * EPSPs are conductances (difference of exponentials, reversal 0 mV), scaled at rest.
 
