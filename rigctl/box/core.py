@@ -122,28 +122,35 @@ class Box:
 
     def take_output(self) -> bytes:
         """Return the bytes to send now."""
-        for frame in self._journal.to_send(self._tick, self._credits):
-            self._out.append(encode_frame(msg.encode(frame)))
+        if self._journal.waiting(self._tick):
+            self._send_journal()
         if not self._out:
             return b""
         out = b"".join(self._out)
         self._out.clear()
         return out
 
+    def _send_journal(self) -> None:
+        for frame in self._journal.to_send(self._tick, self._credits):
+            self._out.append(encode_frame(msg.encode(frame)))
+
+    @property
+    def edges_waiting(self) -> bool:
+        """Whether :meth:`advance` has edges to return at once (outputs that were set low)."""
+        return bool(self._edges)
+
     def next_event_tick(self) -> int | None:
-        """Return when :meth:`advance` has something to do."""
-        due = []
-        if self._queue:
-            due.append(self._queue[0].tick)
-        if self._falling:
-            due.append(self._falling[0][0])
+        """Return when :meth:`advance` or :meth:`take_output` has something to do."""
+        due = self._journal.resend_tick()
+        if self._queue and (due is None or self._queue[0].tick < due):
+            due = self._queue[0].tick
+        if self._falling and (due is None or self._falling[0][0] < due):
+            due = self._falling[0][0]
         if self.armed:
-            due.append(self._heard_tick + self._keep_alive_ticks)
-            due.append(self._expiry_tick)
-        resend = self._journal.resend_tick()
-        if resend is not None:
-            due.append(resend)
-        return min(due) if due else None
+            silent = min(self._heard_tick + self._keep_alive_ticks, self._expiry_tick)
+            if due is None or silent < due:
+                due = silent
+        return due
 
     def advance(self, tick: int) -> list[Edge]:
         """Let time pass up to ``tick``; return the output edges, in order."""
@@ -309,8 +316,7 @@ class Box:
 
     def _on_ping(self, message: msg.Ping) -> None:
         """Everything journaled so far goes out before the answer does."""
-        for frame in self._journal.to_send(self._tick, self._credits):
-            self._out.append(encode_frame(msg.encode(frame)))
+        self._send_journal()
         pong = msg.Pong(
             message.cookie,
             self._tick & msg.TICK_MASK,

@@ -67,6 +67,13 @@ class JournalKeeper:
             return None
         return self._sent_tick + self._resend_ticks
 
+    def waiting(self, tick: int) -> bool:
+        """Tell whether :meth:`to_send` has something at ``tick``."""
+        if self._sent_seq < self.next_seq or self._lost:
+            return True
+        resend = self.resend_tick()
+        return resend is not None and tick >= resend
+
     def to_send(self, tick: int, credits: int) -> list[msg.Journal]:
         """Return the frames to send at ``tick``: what is new, or all again when overdue.
 

@@ -7,6 +7,7 @@ table that :func:`as_markdown` draws from here.
 from __future__ import annotations
 
 import struct
+from functools import lru_cache
 from typing import Any, ClassVar
 
 from msgspec import Struct
@@ -429,8 +430,9 @@ def encode(message: Message) -> bytes:
     return _BY_CLASS[type(message)].encode(message)
 
 
+@lru_cache(maxsize=64)
 def decode(payload: bytes) -> Message:
-    """Return the message of a payload.
+    """Return the message of a payload (kept for a while: a keep-alive comes ten times a second).
 
     Raises
     ------

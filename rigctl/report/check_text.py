@@ -200,7 +200,8 @@ def _forecasts(found: Audit) -> Group:
         )
         lines.append(
             f"    intended pairs alone {percent(f.intended_only)}, other pairs add "
-            f"{percent(f.change - f.intended_only)}, test stimuli {percent(f.change - f.without_tests)}"
+            f"{percent(f.change - f.intended_only)}, test stimuli "
+            f"{percent(f.change - f.without_tests)}"
         )
         if f.sensitivity is not None:
             lines.append(f"    moved by a tenth: {sensitivity_words(f)}")

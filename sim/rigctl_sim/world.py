@@ -70,6 +70,9 @@ class World:
         self._dead_at_ns = _from_s(faults.cable_pull_at_s)
         self._post_inputs = [n for n, i in inputs.items() if i.detects == "post"]
         self._pre_inputs = {i.pathway: n for n, i in inputs.items() if i.detects == "pre"}
+        # When the box wants to run next, and whether it has been spoken to since that was noted.
+        self._box_ns = _NEVER
+        self._box_touched = True
         self._collect(0)
 
     # --- the link's end ---------------------------------------------------------------------
@@ -120,19 +123,13 @@ class World:
 
     def _step(self, until_ns: int) -> None:
         """Run the world to its next event, or to ``until_ns``."""
-        box, clock = self._box, self._box_clock
-        at_ns = until_ns
+        at_ns = until_ns if until_ns < self._box_ns else self._box_ns
         if self._to_box and self._to_box[0][0] < at_ns:
             at_ns = self._to_box[0][0]
         if self._to_host and self._to_host[0][0] < at_ns:
             at_ns = self._to_host[0][0]
         if self._effects and self._effects[0][0] < at_ns:
             at_ns = self._effects[0][0]
-        tick = box.next_event_tick()
-        if tick is not None:
-            box_ns = clock.first_ns_of(tick)
-            if box_ns < at_ns:
-                at_ns = box_ns
         sweep_ns = self.acquisition.due_ns()
         if sweep_ns is not None and sweep_ns < at_ns:
             at_ns = sweep_ns
@@ -141,36 +138,45 @@ class World:
         at_ns = max(at_ns, self.clock.now_ns())
         peak_ns = self._cell.advance(at_ns)
         if peak_ns is not None:
-            at_ns = peak_ns
-            self.clock.sleep_until(at_ns)
-            self._spike(at_ns)
+            self.clock.sleep_until(peak_ns)
+            self._spike(peak_ns)
             return
         self.clock.sleep_until(at_ns)
         while self._effects and self._effects[0][0] <= at_ns:
             heapq.heappop(self._effects)[2](at_ns)
-        now_tick = clock.tick_at(at_ns)
-        if tick is not None and tick <= now_tick:
-            self._run_box(now_tick)
+        if self._box_ns <= at_ns:
+            self._run_box(self._box_clock.tick_at(at_ns))
         if self._to_box and self._to_box[0][0] <= at_ns:
-            _, data = self._to_box.popleft()
-            if self._damaging:
-                data = self._wire_faults.on_the_way(data, True, at_ns)
-            box.receive(data, now_tick)
-            # What a stop or a disarm has set low takes effect at once.
-            self._run_box(now_tick)
+            self._deliver(self._to_box.popleft()[1], at_ns)
         if sweep_ns is not None and sweep_ns <= at_ns:
             self.acquisition.complete()
         if at_ns >= self._reset_at_ns:
             self._reset_box(at_ns)
-        self._collect(at_ns)
+        if self._box_touched:
+            self._collect(at_ns)
+
+    def _deliver(self, data: bytes, at_ns: int) -> None:
+        """Bytes reach the box; what a stop or a disarm has set low takes effect at once."""
+        if self._damaging:
+            data = self._wire_faults.on_the_way(data, True, at_ns)
+        tick = self._box_clock.tick_at(at_ns)
+        self._box.receive(data, tick)
+        self._box_touched = True
+        if self._box.edges_waiting:
+            self._run_box(tick)
 
     def _run_box(self, tick: int) -> None:
+        self._box_touched = True
         for line, level, edge_tick in self._box.advance(tick):
             if level:
                 self._output(line, self._box_clock.first_ns_of(edge_tick))
 
     def _collect(self, now_ns: int) -> None:
+        """Take what the box sends, and note when it wants to run next."""
+        self._box_touched = False
         data = self._box.take_output()
+        tick = self._box.next_event_tick()
+        self._box_ns = _NEVER if tick is None else self._box_clock.first_ns_of(tick)
         if data:
             if self._damaging:
                 data = self._wire_faults.on_the_way(data, False, now_ns)
@@ -187,6 +193,7 @@ class World:
             )
         )
         self._box_clock.boot_ns = now_ns
+        self._box_touched = True
 
     def _at(self, at_ns: int, effect: Callable[[int], None]) -> None:
         self._seq += 1
