@@ -28,6 +28,8 @@ from rigctl.session.rows import (
 from rigctl.session.sweeps import Sweep
 
 R = TypeVar("R", bound=Row)
+# What every record says of itself; without these nothing can be made from it.
+_NEEDED = ("protocol_file", "protocol_text", "rig_file", "rig_text", "plan_hash", "simulated")
 _MAGIC = b"SQLite format 3\0"
 
 
@@ -143,10 +145,23 @@ class Record:
             raise _damaged(self.path, error) from None
 
     def bodies(self, kind: str) -> list[dict[str, Any]]:
-        """Return the bodies of the events of a kind, each with its ``at_ns``."""
-        return [
-            {"at_ns": e.at_ns, **msgspec.json.decode(e.body)} for e in self.events if e.kind == kind
-        ]
+        """Return the bodies of the events of a kind, each with its ``at_ns``.
+
+        Raises
+        ------
+        InputError
+            A body is not what the session writes.
+        """
+        return [{"at_ns": e.at_ns, **self.body(e)} for e in self.events if e.kind == kind]
+
+    def body(self, event: EventRow) -> dict[str, Any]:
+        """Return an event's body."""
+        try:
+            return msgspec.json.decode(event.body, type=dict[str, Any])
+        except msgspec.DecodeError as error:
+            raise DamagedRecord(
+                f"{self.path}: the record is damaged: event {event.seq} ({event.kind}): {error}."
+            ) from None
 
     def sweeps(self, from_ns: int, to_ns: int) -> Iterator[Sweep]:
         """Iterate over the sweeps whose first sample lies in [from_ns, to_ns)."""
@@ -160,15 +175,37 @@ class Record:
         except sqlite3.DatabaseError as error:
             raise _damaged(self.path, error) from None
 
+    def sweep_at(self, at_ns: int) -> Sweep | None:
+        """Return the sweep that covers ``at_ns``, or None."""
+        row = self._one(
+            "SELECT at_ns, cell, clamp, rate_hz, unit, scale, samples FROM sweep "
+            "WHERE at_ns <= ? ORDER BY at_ns DESC LIMIT 1",
+            (at_ns,),
+        )
+        if row is None:
+            return None
+        start_ns, cell, clamp, rate_hz, unit, scale, samples = row
+        if start_ns + len(samples) // 2 / rate_hz * 1e9 <= at_ns:
+            return None
+        return Sweep(start_ns, rate_hz, unit, scale, samples, cell, clamp)
+
     def count(self, table: type[Row]) -> int:
         """Return the number of rows of a table."""
-        return int(self._db.execute(f'SELECT count(*) FROM "{table.TABLE}"').fetchone()[0])
+        row = self._one(f'SELECT count(*) FROM "{table.TABLE}"')
+        return int(row[0]) if row else 0
 
     @cached_property
     def chain_tip(self) -> str:
         """The chain value of the last event."""
-        row = self._db.execute("SELECT chain FROM event ORDER BY seq DESC LIMIT 1").fetchone()
-        return row[0] if row else ""
+        row = self._one("SELECT chain FROM event ORDER BY seq DESC LIMIT 1")
+        return str(row[0]) if row else ""
+
+    def _one(self, query: str, values: tuple[int, ...] = ()) -> tuple[Any, ...] | None:
+        try:
+            row: tuple[Any, ...] | None = self._db.execute(query, values).fetchone()
+        except sqlite3.DatabaseError as error:
+            raise _damaged(self.path, error) from None
+        return row
 
 
 def connect(path: Path) -> tuple[sqlite3.Connection, dict[str, str]]:
@@ -205,6 +242,12 @@ def connect(path: Path) -> tuple[sqlite3.Connection, dict[str, str]]:
         raise InputError(
             f"{path}: the record is of version {version}; this program reads up to "
             f"{RECORD_VERSION}: use a newer one."
+        )
+    missing = [key for key in _NEEDED if key not in header]
+    if missing:
+        db.close()
+        raise DamagedRecord(
+            f"{path}: the record is damaged: its header lacks {', '.join(missing)}."
         )
     return db, header
 

@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+from functools import cached_property
 from typing import Any, NamedTuple
 
 import numpy as np
@@ -14,10 +15,13 @@ from rigctl.protocol.planned import paired_pathways, planned_spikes
 from rigctl.record.read import Record
 from rigctl.record.verify import plan_of
 from rigctl.report.summary import summarise
+from rigctl.report.trend import theil_sen
 from rigctl.session.rows import SpikePairRow
 
 Floats = npt.NDArray[np.float64]
-_T95 = 1.96
+# A creep smaller than this is not worth a sentence (common practice, no source).
+_LEAST_CREEP_MS = 0.5
+_LEAST_PAIRS = 12
 
 
 class PhaseTime(Struct, frozen=True):
@@ -30,10 +34,14 @@ class PhaseTime(Struct, frozen=True):
 
 
 class Creep(NamedTuple):
-    """A clear trend of Δt error over the pairings, ms."""
+    """A clear trend of the Δt error over the pairings, ms: from first to last, with its interval.
+
+    ``first_ms`` and ``last_ms`` are the median errors of the first and the last tenth.
+    """
 
     total_ms: float
-    half_ms: float
+    low_ms: float
+    high_ms: float
     first_ms: float
     last_ms: float
 
@@ -52,7 +60,8 @@ class Facts:
 
     def _phase_times(self) -> list[PhaseTime]:
         ends = {e["phase"]: int(e["at_ns"]) for e in self.record.bodies("phase_end")}
-        last = self.record.events[-1].at_ns if self.record.events else 0
+        # Not the last event's: a box that starts anew begins its clock anew.
+        last = max((e.at_ns for e in self.record.events), default=0)
         return [
             PhaseTime(s["name"], s["kind"], int(s["start_ns"]), ends.get(s["phase"], last))
             for s in self.record.bodies("phase_start")
@@ -78,6 +87,11 @@ class Facts:
         """Return the spike pairs that came up, in order."""
         return [p for p in self.record.spike_pairs if p.fate != "not_run"]
 
+    def targets_ms(self) -> list[float]:
+        """Return the planned Δt, ms, each once, rising."""
+        pairs = (p for phase in self.plan.phases for x in phase.pairings for p in x.pairs)
+        return sorted({p.target_dt_ns / 1e6 for p in pairs})
+
     def errors_ms(self) -> tuple[Floats, Floats]:
         """Return pairing numbers and Δt errors of single spikes, ms."""
         good = [
@@ -89,23 +103,50 @@ class Facts:
         return values[:, 0], values[:, 1]
 
     def creep(self) -> Creep | None:
-        """Return the trend of the Δt error, when it is clear: its interval excludes zero and it
-        is larger than half a millisecond (0.5 ms: common practice, no source).
+        """Return the trend of the Δt error over the pairings, when it is clear.
+
+        Clear: its 95 % interval excludes zero and it is larger than half a millisecond.
         """
+        return self._creep
+
+    @cached_property
+    def _creep(self) -> Creep | None:
         numbers, errors = self.errors_ms()
         n = len(errors)
-        if n < 12 or np.ptp(numbers) == 0:
+        span = float(np.ptp(numbers)) if n else 0.0
+        if n < _LEAST_PAIRS or span == 0:
             return None
-        centred = numbers - numbers.mean()
-        spread = float(centred @ centred)
-        slope = float(centred @ errors) / spread
-        rest = errors - errors.mean() - slope * centred
-        half = _T95 * float(np.sqrt(rest @ rest / (n - 2) / spread)) * float(np.ptp(numbers))
-        total = slope * float(np.ptp(numbers))
-        if abs(total) <= max(half, 0.5):
+        trend = theil_sen(numbers, errors)
+        total, low, high = (slope * span for slope in trend)
+        if low <= 0 <= high or abs(total) <= _LEAST_CREEP_MS:
             return None
         tenth = max(3, n // 10)
-        return Creep(total, half, float(errors[:tenth].mean()), float(errors[-tenth:].mean()))
+        return Creep(
+            total, low, high, float(np.median(errors[:tenth])), float(np.median(errors[-tenth:]))
+        )
+
+    @property
+    def pre_is_derived(self) -> bool:
+        """Whether every pre event of a pairing is trigger + latency, so that Δt moves with post."""
+        return all(
+            s.source == "derived"
+            for s in self.record.spikes
+            if s.side == "pre" and s.pairing is not None
+        )
+
+    def responses(self) -> dict[str, Floats]:
+        """Return the measured response amplitudes by pathway: minutes and values, shape (n, 2)."""
+        found: dict[str, list[tuple[float, float]]] = {}
+        for m in self.record.measures:
+            if m.kind.endswith("amplitude") and m.pathway is not None:
+                found.setdefault(m.pathway, []).append((self.minutes(m.at_ns), m.value))
+        return {pathway: np.array(found[pathway]) for pathway in sorted(found)}
+
+    @property
+    def response_unit(self) -> str:
+        """The unit of the response amplitudes."""
+        units = (m.unit for m in self.record.measures if m.kind.endswith("amplitude"))
+        return next(units, "mV")
 
     def first_off_target(self) -> int | None:
         """Return the number of the first pairing off target."""

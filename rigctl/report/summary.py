@@ -11,6 +11,7 @@ from rigctl.protocol.plan import Plan
 from rigctl.protocol.planned import paired_pathways, planned_spikes
 from rigctl.record.read import Record
 from rigctl.record.verify import plan_of
+from rigctl.session.core import ticks_to_ns
 from rigctl.session.rows import PAIR_FATES
 
 if TYPE_CHECKING:
@@ -53,7 +54,8 @@ def duration_ns(record: Record) -> int:
     starts = record.bodies("phase_start")
     if not starts or not record.events:
         return 0
-    return max(0, record.events[-1].at_ns - int(starts[0]["start_ns"]))
+    # The largest time, not the last: a box that starts anew begins its clock anew.
+    return max(0, max(e.at_ns for e in record.events) - int(starts[0]["start_ns"]))
 
 
 def pairing_counts(record: Record, plan: Plan) -> dict[str, int]:
@@ -85,10 +87,12 @@ def dt_statistics(record: Record) -> dict[str, float | None]:
     return {"target": target, "mean": mean, "sd": sd, "min": min(dts), "max": max(dts)}
 
 
-def lateness_ns(record: Record, tick_ns: int) -> list[int]:
+def lateness_ns(record: Record) -> list[int]:
     """Return fired minus planned time of every trigger that fired, sorted."""
+    hello = record.bodies("connected")
+    num, den = (int(hello[0]["tick_num"]), int(hello[0]["tick_den"])) if hello else (1, 1)
     late = [
-        t.fired_ns - t.planned_tick * tick_ns
+        t.fired_ns - ticks_to_ns(t.planned_tick, num, den)
         for t in record.triggers
         if t.fate == "fired" and t.fired_ns is not None and t.planned_tick is not None
     ]
@@ -97,18 +101,13 @@ def lateness_ns(record: Record, tick_ns: int) -> list[int]:
 
 def lateness_us(record: Record) -> dict[str, float | None]:
     """Return percentiles of the lateness, µs; null where there are too few events for one."""
-    late = lateness_ns(record, _tick_ns(record))
+    late = lateness_ns(record)
     found: dict[str, float | None] = {}
     for name, p in (("p50", 0.5), ("p99", 0.99), ("p999", 0.999)):
         enough = len(late) >= _LEAST_N[name]
         found[name] = late[max(0, math.ceil(p * len(late)) - 1)] / 1000 if enough else None
     found["max"] = late[-1] / 1000 if late else None
     return found
-
-
-def _tick_ns(record: Record) -> int:
-    hello = record.bodies("connected")
-    return int(hello[0]["tick_num"]) // int(hello[0]["tick_den"]) if hello else 1
 
 
 def delivered_forecast(record: Record, plan: Plan) -> dict[str, dict[str, float]]:
@@ -158,8 +157,10 @@ def as_text(summary: dict[str, Any]) -> RenderableType:
     table.add_row("ended", head)
     table.add_row(
         "pairings",
-        f"{pairings['on_target']} of {pairings['planned']} on target; "
-        + ", ".join(f"{pairings[f]} {f.replace('_', ' ')}" for f in PAIR_FATES[1:] if pairings[f]),
+        "; ".join(
+            [f"{pairings['on_target']} of {pairings['planned']} on target"]
+            + [f"{pairings[f]} {f.replace('_', ' ')}" for f in PAIR_FATES[1:] if pairings[f]]
+        ),
     )
     if dt["mean"] is not None:
         spread = "" if dt["sd"] is None else f" ± {dt['sd']:.2f}"

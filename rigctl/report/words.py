@@ -6,7 +6,11 @@ it never says that the synapse changed.
 
 from __future__ import annotations
 
+from rigctl.plasticity.forecast import extrapolates
+from rigctl.protocol.plan import PlanLine
 from rigctl.report.facts import Facts
+from rigctl.report.names import event_name, fate_name, phase_name
+from rigctl.report.summary import label
 from rigctl.session.rows import PAIR_FATES
 
 SIMULATED_NOTE = (
@@ -29,19 +33,6 @@ _ENDED = {
     "refused": "The box could not do what the plan asks",
     "interrupted": "It was interrupted; the record is open",
 }
-_EVENTS = {
-    "epsp_onset": "EPSP onset",
-    "presynaptic_spike": "presynaptic spike",
-    "field_epsp_onset": "onset of the field EPSP",
-    "spike_peak": "spike peak",
-    "spike_threshold": "spike threshold",
-    "trigger": "trigger",
-}
-
-
-def event_name(reference: str) -> str:
-    """Return a reference event's name in words."""
-    return _EVENTS.get(reference, reference)
 
 
 def five_lines(facts: Facts) -> list[str]:
@@ -50,70 +41,102 @@ def five_lines(facts: Facts) -> list[str]:
 
 
 def _asked(facts: Facts) -> str:
-    counts, dt = facts.summary["pairings"], facts.summary["dt_ms"]
+    planned = facts.summary["pairings"]["planned"]
+    targets = facts.targets_ms()
     pre, post = event_name(facts.plan.pre_reference), event_name(facts.plan.post_reference)
-    target = "" if dt["target"] is None else f" at Δt {dt['target']:+g} ms"
-    return (
-        f"Asked: {counts['planned']} pairings{target} on pathway {facts.paired or '(none)'}, "
-        f"Δt from {pre} to {post} (positive: pre leads)."
-    )
+    on = f"on pathway {facts.paired}" if facts.paired else "on no pathway"
+    if not targets:
+        return f"Asked: {planned} pairings {on} without a spike pair: a control."
+    at = f"{targets[0]:+g} ms"
+    if len(targets) > 1:
+        at = f"from {targets[0]:+g} to {targets[-1]:+g} ms ({len(targets)} values)"
+    return f"Asked: {planned} pairings {on}, Δt {at} from {pre} to {post} (positive: pre leads)."
 
 
 def _happened(facts: Facts) -> str:
     counts = facts.summary["pairings"]
     ended = _ENDED.get(facts.summary["ended"], facts.summary["ended"])
+    after = f"{ended} after {facts.summary['duration_s'] / 60:.1f} min."
+    if not facts.targets_ms():
+        return f"Happened: {counts['delivered']} pairings were delivered. {after}"
     return (
-        f"Happened: {counts['delivered']} pairings delivered both spikes, "
-        f"{counts['on_target']} of them on target. {ended} after "
-        f"{facts.summary['duration_s'] / 60:.1f} min."
+        f"Happened: {counts['delivered']} pairings were delivered with both spikes, "
+        f"{counts['on_target']} of them on target. {after}"
     )
 
 
 def _delta_t(facts: Facts) -> str:
     dt = facts.summary["dt_ms"]
     _numbers, errors = facts.errors_ms()
+    if len(errors) == 0:
+        return "Δt: none was delivered."
     if dt["mean"] is None:
-        if len(errors) == 0:
-            return "Δt: none was delivered."
         spread = f" ± {errors.std(ddof=1):.2f} ms (SD)" if len(errors) > 1 else " ms"
-        return f"Δt: error {errors.mean():+.2f}{spread} over {len(errors)} spike pairs."
-    spread = "" if dt["sd"] is None else f" ± {dt['sd']:.2f} ms (SD)"
-    text = (
-        f"Δt: {dt['mean']:+.2f}{spread}, {dt['min']:+.2f} to {dt['max']:+.2f} ms; "
-        f"mean error {dt['mean'] - dt['target']:+.2f} ms."
-    )
-    creep = facts.creep()
-    if creep is not None:
-        target = dt["target"]
-        text += (
-            f" Spike latency crept: Δt moved by {creep.total_ms:+.1f} ± {creep.half_ms:.1f} ms "
-            f"over the induction, from {target + creep.first_ms:+.1f} to "
-            f"{target + creep.last_ms:+.1f} ms."
+        text = f"Δt: error {errors.mean():+.2f}{spread} over {len(errors)} spike pairs."
+    else:
+        spread = "" if dt["sd"] is None else f" ± {dt['sd']:.2f}"
+        text = (
+            f"Δt: {dt['mean']:+.2f}{spread} ms (mean{' ± SD' if spread else ''}), "
+            f"{dt['min']:+.2f} to {dt['max']:+.2f} ms; mean error "
+            f"{dt['mean'] - dt['target']:+.2f} ms over {len(errors)} spike pairs."
         )
-        first = facts.first_off_target()
-        if first is not None:
-            text += f" The first pairing off target was number {first}."
-    return text
+    return text + _creep(facts)
+
+
+def _creep(facts: Facts) -> str:
+    creep = facts.creep()
+    if creep is None:
+        return ""
+    target = facts.summary["dt_ms"]["target"]
+    what, start = ("Δt", target) if target is not None else ("the error of Δt", 0.0)
+    # Where every pre event is trigger + a fixed latency, only the spike's latency can move Δt.
+    who = "Spike latency" if facts.pre_is_derived else "Latency"
+    text = (
+        f" {who} crept by {creep.total_ms:+.1f} ms over the induction (95 % interval "
+        f"{creep.low_ms:+.1f} to {creep.high_ms:+.1f}): {what} moved from "
+        f"{start + creep.first_ms:+.1f} to {start + creep.last_ms:+.1f} ms"
+    )
+    first = facts.first_off_target()
+    if first is None:
+        return f"{text}; no pairing was off target."
+    return f"{text}; the first pairing off target was number {first}."
 
 
 def _missed(facts: Facts) -> str:
     counts = facts.summary["pairings"]
-    parts = [f"{counts[f]} {f.replace('_', ' ')}" for f in PAIR_FATES[1:] if counts[f]]
+    parts = [f"{counts[f]} {fate_name(f)}" for f in PAIR_FATES[1:] if counts[f]]
     ledger = "Ledger: " + (", ".join(parts) if parts else "no pairing missed, doubled or unknown")
     alarms = len(facts.summary["alarms"])
     return f"{ledger}; {alarms} alarm{'' if alarms == 1 else 's'}."
 
 
 def _forecast(facts: Facts) -> str:
-    parts = []
-    for name, value in facts.summary["forecast"].items():
-        planned = facts.summary["forecast_as_planned"].get(name)
-        exactly = f" (planned exactly {planned['change_pct']:+.1f} %)" if planned else ""
-        parts.append(
-            f"under {name} these delivered times imply {value['change_pct']:+.1f} % "
-            f"[{value['low_pct']:+.1f}, {value['high_pct']:+.1f}]{exactly}"
+    plan, parts = facts.plan, []
+    for choice in plan.forecasts:
+        name = label(plan, choice.rule, choice.parameter_set)
+        value = facts.summary["forecast"].get(name)
+        if value is None:
+            continue
+        text = (
+            f"under {name} with {choice.parameter_set} these delivered times imply "
+            f"{percent(value['change_pct'])} "
+            f"[{value['low_pct']:+.1f}, {value['high_pct']:+.1f}]"
         )
+        notes = []
+        planned = facts.summary["forecast_as_planned"].get(name)
+        if planned:
+            notes.append(f"planned exactly {percent(planned['change_pct'])}")
+        if choice.preparation is None:
+            notes.append("NO PREPARATION NAMED")
+        if extrapolates(choice, facts.summary["pairings"]["delivered"]):
+            notes.append("extrapolated")
+        parts.append(f"{text} ({'; '.join(notes)})" if notes else text)
     return "Forecast: " + ("; ".join(parts) or "none") + "."
+
+
+def percent(value_pct: float) -> str:
+    """Return a change in %, signed; no minus before a zero."""
+    return f"{round(value_pct, 1) or 0.0:+.1f} %"
 
 
 def methods(facts: Facts) -> str:
@@ -121,7 +144,9 @@ def methods(facts: Facts) -> str:
     plan, summary, header = facts.plan, facts.summary, facts.record.header
     counts, dt = summary["pairings"], summary["dt_ms"]
     pre, post = event_name(plan.pre_reference), event_name(plan.post_reference)
-    phases = ", ".join(f"{p.name} ({(p.end_ns - p.start_ns) / 6e10:.1f} min)" for p in facts.phases)
+    phases = ", ".join(
+        f"{phase_name(p.name)} ({(p.end_ns - p.start_ns) / 6e10:.1f} min)" for p in facts.phases
+    )
     sentences = []
     if facts.simulated:
         sentences.append("[SIMULATED: a rehearsal, no preparation.]")
@@ -137,15 +162,13 @@ def methods(facts: Facts) -> str:
             f"Δt was counted from {pre} to {post}; the delivered Δt was {dt['mean']:+.2f} ± "
             f"{dt['sd']:.2f} ms (mean ± SD, target {dt['target']:+g} ms)."
         )
-    sentences += [
-        f"On {line.name} the {event_name(line.reference)} was dated by the trigger's edge plus a "
-        f"measured latency of {line.latency_ns / 1e6:.2f} ± {line.latency_sd_ns / 1e6:.2f} ms "
-        f"(n = {line.latency_n})."
-        for line in plan.lines
-        if line.drives == "pre" and line.reference != "trigger"
-    ]
+    sentences += [_dated(facts, line) for line in plan.lines if line.drives == "pre"]
     timed = "a trigger box" if header.get("timed_by") == "box" else "the host computer"
     late = summary["lateness_us"]["max"]
+    responses = facts.responses()
+    if responses:
+        counts_of = ", ".join(f"{len(values)} on {p}" for p, values in responses.items())
+        sentences.append(f"Responses to test stimuli were measured as amplitudes: {counts_of}.")
     if late is not None:
         sentences.append(
             f"Pulses were timed by {timed}; the largest lateness of a pulse was {late:g} µs."
@@ -155,3 +178,24 @@ def methods(facts: Facts) -> str:
         "delivered times throughout."
     )
     return " ".join(sentences)
+
+
+def _dated(facts: Facts, line: PlanLine) -> str:
+    """Say how the pre events of a line were dated."""
+    name = event_name(line.reference)
+    detector = next(
+        (
+            i.name
+            for i in facts.plan.inputs
+            if i.detects == "pre" and i.pathway in (None, line.pathway)
+        ),
+        None,
+    )
+    if detector is not None:
+        return f"On {line.name} the {name} was detected (input {detector})."
+    if line.reference == "trigger":
+        return f"On {line.name} the pre event is the trigger's edge itself."
+    return (
+        f"On {line.name} the {name} was dated by the trigger's edge plus a measured latency of "
+        f"{line.latency_ns / 1e6:.2f} ± {line.latency_sd_ns / 1e6:.2f} ms (n = {line.latency_n})."
+    )

@@ -9,6 +9,7 @@ from __future__ import annotations
 
 import heapq
 from collections import deque
+from math import ceil, exp, log
 
 import numpy as np
 import numpy.typing as npt
@@ -59,6 +60,7 @@ class ScriptedCell:
         self._shown_spikes: deque[int] = deque()
         self._steps: deque[tuple[int, int, float]] = deque()
         self._artefacts: deque[int] = deque()
+        self._decays: dict[tuple[float, float], Floats] = {}
 
     def _own_interval_ns(self) -> int:
         return round(self._rng.exponential(1e9 / self._knobs.spontaneous_hz))
@@ -111,48 +113,67 @@ class ScriptedCell:
         return None
 
     def trace_mv(self, start_ns: int, n: int, rate_hz: float) -> Floats:
-        """Return what the amplifier shows."""
+        """Return what the amplifier shows; the noise belongs to the sweep that starts there."""
         knobs = self._knobs
         rng = np.random.default_rng([*self._noise_key, start_ns % (1 << 63)])
         trace = rng.standard_normal(n, dtype=np.float32).astype(np.float64)
         trace *= knobs.noise_mv
         trace += knobs.rest_mv
-        per_ns = rate_hz / 1e9
         per_ms = rate_hz / 1000
 
-        def stretch(at_ns: int, shows_ns: int) -> tuple[slice, Floats]:
-            """Return where an event shows and the ms since it began at each sample there."""
-            first = max(0, int(np.ceil((at_ns - start_ns) * per_ns)))
-            last = min(n, int((at_ns + shows_ns - start_ns) * per_ns))
-            since_ms = (np.arange(first, max(first, last)) - (at_ns - start_ns) * per_ns) / per_ms
-            return slice(first, max(first, last)), since_ms.astype(np.float64, copy=False)
+        def stretch(at_ns: int, shows_ns: int) -> tuple[Floats, float]:
+            """Return the samples in which an event shows, and how long before the first it began.
 
+            The part of the trace is a view: what is added to it is in the trace.
+            """
+            begun = (at_ns - start_ns) / 1e6 * per_ms
+            first = max(0, ceil(begun))
+            last = max(first, min(n, int(begun + shows_ns / 1e6 * per_ms)))
+            return trace[first:last], (first - begun) / per_ms
+
+        rise_ms, decay_ms = knobs.rise_ms, knobs.decay_ms
+        if rise_ms == decay_ms:
+            decay_ms *= 1.0001
+        scale = 1 / _epsp_peak(rise_ms, decay_ms)
         for onset_ns, amplitude_mv in self._epsps:
-            where, ms = stretch(onset_ns, _EPSP_SHOWS_NS)
-            trace[where] += amplitude_mv * _epsp_shape(ms, knobs.rise_ms, knobs.decay_ms)
+            part, ms = stretch(onset_ns, _EPSP_SHOWS_NS)
+            shape = self._decay(decay_ms, ms, len(part), rate_hz)
+            shape -= self._decay(rise_ms, ms, len(part), rate_hz)
+            shape *= amplitude_mv * scale
+            part += shape
         for at_ns, width_ns, current_pa in self._steps:
-            where, ms = stretch(at_ns, width_ns + _STEP_SHOWS_NS)
-            trace[where] += current_pa * self._step_shape(ms, width_ns / 1e6)
+            mv_per_mohm = current_pa / 1000
+            full_mv = knobs.input_resistance_mohm * mv_per_mohm
+            tau_ms, width_ms = knobs.membrane_tau_ms, width_ns / 1e6
+            part, ms = stretch(at_ns, width_ns)
+            part -= full_mv * self._decay(tau_ms, ms, len(part), rate_hz)
+            part += full_mv + knobs.series_resistance_mohm * mv_per_mohm
+            part, ms = stretch(at_ns + width_ns, _STEP_SHOWS_NS)
+            left_mv = full_mv * (1 - exp(-width_ms / tau_ms))
+            part += left_mv * self._decay(tau_ms, ms, len(part), rate_hz)
         for at_ns in self._artefacts:
-            where, ms = stretch(at_ns, _ARTEFACT_SHOWS_NS)
-            trace[where] += knobs.artefact_mv * np.exp(-ms / _ARTEFACT_MS)
+            part, ms = stretch(at_ns, _ARTEFACT_SHOWS_NS)
+            part += knobs.artefact_mv * self._decay(_ARTEFACT_MS, ms, len(part), rate_hz)
         for peak_ns in self._shown_spikes:
-            where, ms = stretch(peak_ns - 2_000_000, _SPIKE_SHOWS_NS)
-            ms = ms - 2.0
-            shape = _SPIKE_MV * np.exp(-((ms / _SPIKE_WIDTH_MS) ** 2) / 2)
-            shape -= np.where(ms > 0, _AFTER_MV * (ms / _AFTER_MS) * np.exp(1 - ms / _AFTER_MS), 0)
-            trace[where] += shape
+            part, ms = stretch(peak_ns - 2_000_000, _SPIKE_SHOWS_NS)
+            since_ms = np.arange(len(part)) / per_ms + (ms - 2.0)
+            part += _spike_shape(since_ms)
         return trace
 
-    def _step_shape(self, ms: Floats, width_ms: float) -> Floats:
-        """Return mV per pA of a pulse through the series and the input resistance."""
-        knobs = self._knobs
-        tau_ms = knobs.membrane_tau_ms
-        charged = 1 - np.exp(-np.minimum(ms, width_ms) / tau_ms)
-        after = np.exp(-np.maximum(ms - width_ms, 0) / tau_ms)
-        shape: Floats = knobs.input_resistance_mohm * charged * after
-        shape = shape + knobs.series_resistance_mohm * (ms < width_ms)
-        return shape / 1000
+    def _decay(self, tau_ms: float, begun_ms: float, n: int, rate_hz: float) -> Floats:
+        """Return n samples of exp(−t/τ), the first of them ``begun_ms`` after its beginning.
+
+        One table for each time constant: an exponential shifted is an exponential scaled.
+        """
+        key = (tau_ms, rate_hz)
+        table = self._decays.get(key)
+        if table is None or len(table) < n:
+            # Beyond 700 τ it is nothing, and exp would say so by underflowing.
+            samples = np.arange(max(n, 1024)) * (1000 / (rate_hz * tau_ms))
+            table = self._decays[key] = np.exp(-np.minimum(samples, 700.0))
+        # Long after its beginning an event shows no more than 700 τ would either.
+        values: Floats = table[:n] * exp(-min(begun_ms / tau_ms, 700.0))
+        return values
 
     def forget(self, before_ns: int) -> None:
         """Drop what cannot show any more."""
@@ -166,11 +187,15 @@ class ScriptedCell:
             self._artefacts.popleft()
 
 
-def _epsp_shape(ms: Floats, rise_ms: float, decay_ms: float) -> Floats:
-    """Return a difference of exponentials with its peak at 1."""
-    if rise_ms == decay_ms:
-        decay_ms *= 1.0001
-    peak_ms = np.log(decay_ms / rise_ms) * rise_ms * decay_ms / (decay_ms - rise_ms)
-    peak = np.exp(-peak_ms / decay_ms) - np.exp(-peak_ms / rise_ms)
-    shape: Floats = (np.exp(-ms / decay_ms) - np.exp(-ms / rise_ms)) / peak
+def _epsp_peak(rise_ms: float, decay_ms: float) -> float:
+    """Return the peak of a difference of exponentials."""
+    peak_ms = log(decay_ms / rise_ms) * rise_ms * decay_ms / (decay_ms - rise_ms)
+    return exp(-peak_ms / decay_ms) - exp(-peak_ms / rise_ms)
+
+
+def _spike_shape(ms: Floats) -> Floats:
+    """Return a spike's mV over the ms since its peak: a bell, then an after-hyperpolarisation."""
+    shape: Floats = _SPIKE_MV * np.exp(-((ms / _SPIKE_WIDTH_MS) ** 2) / 2)
+    after = np.maximum(ms, 0) / _AFTER_MS
+    shape -= _AFTER_MV * after * np.exp(1 - after)
     return shape
