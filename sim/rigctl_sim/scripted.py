@@ -128,7 +128,7 @@ class ScriptedCell:
             """
             begun = (at_ns - start_ns) / 1e6 * per_ms
             first = max(0, ceil(begun))
-            last = max(first, min(n, int(begun + shows_ns / 1e6 * per_ms)))
+            last = max(first, min(n, ceil(begun + shows_ns / 1e6 * per_ms)))
             return trace[first:last], (first - begun) / per_ms
 
         rise_ms, decay_ms = knobs.rise_ms, knobs.decay_ms
