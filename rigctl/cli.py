@@ -292,12 +292,21 @@ def predict(
 
 
 @cli.command()
-@click.argument("which", type=click.Choice(["protocol", "rig"]))
+@click.argument("which", type=click.Choice(["protocol", "rig", "sim"]))
 def schema(which: str) -> None:
-    """Print the JSON Schema of protocol or rig files, for editors."""
-    from rigctl.protocol.jsonschema import schema as make
+    """Print the JSON Schema of protocol or rig files, for editors.
 
-    click.echo(json.dumps(make(which), indent=2))
+    `sim` is the [sim] table of a rig file: every knob of the simulated rig, with its default.
+    """
+    if which == "sim":
+        from rigctl import backends
+
+        made = backends.load("sim").knobs_schema()
+    else:
+        from rigctl.protocol.jsonschema import schema as make
+
+        made = make(which)
+    click.echo(json.dumps(made, indent=2))
 
 
 @cli.command()

@@ -6,7 +6,7 @@ when a rig file names it. The session never learns what stands at the end of the
 
 from __future__ import annotations
 
-from typing import Protocol
+from typing import Any, Protocol
 
 from msgspec import Struct
 
@@ -72,6 +72,10 @@ class Backend(Protocol):
 
     def describe_faults(self) -> list[tuple[str, str, str]]:
         """Return (key, unit, what it does) for every fault that can be injected; often none."""
+        ...
+
+    def knobs_schema(self) -> dict[str, Any]:
+        """Return the JSON Schema of the backend's own table in the rig file."""
         ...
 
     def open(self, rig: Rig, plan: Plan, options: OpenOptions) -> Connection:

@@ -12,6 +12,7 @@ from msgspec import Struct, to_builtins
 
 from rigctl.errors import InputError
 from rigctl.plasticity import rules
+from rigctl.plasticity.forecast import extrapolates
 from rigctl.plasticity.sets import resolve
 from rigctl.protocol.schema import Forecast
 
@@ -29,6 +30,7 @@ class Prediction(Struct, frozen=True):
     pre: int
     post: int
     change: float
+    extrapolation: str | None
     course: list[tuple[float, str, float]]
 
 
@@ -64,6 +66,7 @@ def predict(
         Forecast(rule=rule, set=set_name, **_parameters(parameters)), None, "predict", "--rule"
     )
     made = rules.rule(choice.rule, **choice.parameters)
+    pre = sum(1 for _, side in spikes if side == "pre")
     course = []
     for at_s, side in spikes:
         (made.pre if side == "pre" else made.post)(at_s)
@@ -73,9 +76,11 @@ def predict(
         choice.parameter_set,
         choice.preparation,
         choice.source,
-        sum(1 for _, side in spikes if side == "pre"),
-        sum(1 for _, side in spikes if side == "post"),
+        pre,
+        len(spikes) - pre,
         made.change,
+        # Nobody said which spikes make a pairing: there are at least as many as the rarer side has.
+        extrapolates(choice, min(pre, len(spikes) - pre)),
         course,
     )
 
@@ -143,6 +148,7 @@ def as_text(prediction: Prediction) -> str:
         f"under {prediction.rule}, {prediction.parameter_set} ({badge}), these times imply "
         f"{100 * prediction.change:+.2f} %",
         f"{prediction.pre} pre and {prediction.post} post spikes; {prediction.source}",
+        *([f"EXTRAPOLATION: {prediction.extrapolation}"] if prediction.extrapolation else []),
         "",
         "       at, s  side   change",
     ]

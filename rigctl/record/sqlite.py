@@ -77,7 +77,15 @@ class SqliteSink:
                 self._db.execute(create_sql(table))
             self._db.execute("COMMIT")
         except sqlite3.Error as error:
+            self._leave_nothing()
             raise InputError(f"{path}: a record cannot be made there: {error}.") from None
+
+    def _leave_nothing(self) -> None:
+        """Take away what a failed beginning has made."""
+        if hasattr(self, "_db"):
+            self._db.close()
+        for suffix in ("", "-wal", "-shm"):
+            self.path.with_name(self.path.name + suffix).unlink(missing_ok=True)
 
     def write(self, rows: Sequence[Row]) -> None:
         """Write ``rows`` into the open transaction."""

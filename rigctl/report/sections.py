@@ -273,12 +273,13 @@ def definitions(facts: Facts) -> str:
             line.name,
             line.drives,
             line.pathway or "",
-            "" if line.drives == "step" else event_name(line.reference),
+            event_name(line.reference),
             f"{line.latency_ns / 1e6:.3f}",
             f"{line.latency_sd_ns / 1e6:.3f}",
             line.latency_n or "not stated",
         )
         for line in plan.lines
+        if line.drives != "step"
     ]
     inputs = [
         (i.name, i.detects, event_name(i.reference), f"{i.offset_ns / 1e6:+.3f}")

@@ -174,8 +174,8 @@ def methods(facts: Facts) -> str:
             f"Pulses were timed by {timed}; the largest lateness of a pulse was {late:g} µs."
         )
     sentences.append(
-        f"The protocol's plan has the SHA-256 {summary['plan_hash'][:16]}…; analysis used "
-        "delivered times throughout."
+        f"The protocol's plan has the SHA-256 {summary['plan_hash'][:16]}…; every Δt "
+        "given here is of delivered events."
     )
     return " ".join(sentences)
 

@@ -3,7 +3,6 @@
 from __future__ import annotations
 
 import importlib.metadata
-import time
 from typing import Any
 
 import msgspec
@@ -14,7 +13,7 @@ from rigctl.box import BoxConfig
 from rigctl.errors import InputError
 from rigctl.protocol.plan import Plan
 from rigctl.protocol.rig import Rig
-from rigctl.timing.clock import VirtualClock
+from rigctl.timing.clock import Clock, MonotonicClock, VirtualClock
 from rigctl_sim import faults as fault_list
 from rigctl_sim.boxclock import BoxClock
 from rigctl_sim.interfaces import Cell
@@ -28,9 +27,10 @@ from rigctl_sim.world import World
 class PacedWorld:
     """The same world, held back to the pace of the wall clock."""
 
-    def __init__(self, world: World) -> None:
+    def __init__(self, world: World, wall: Clock) -> None:
         self._world = world
-        self._began_ns = time.monotonic_ns()
+        self._wall = wall
+        self._ahead_ns = wall.now_ns() - world.clock.now_ns()
 
     def write(self, data: bytes) -> None:
         """Send bytes to the box."""
@@ -39,9 +39,7 @@ class PacedWorld:
     def wait(self, until_ns: int) -> bytes:
         """Wait in virtual time, then until the wall clock has caught up."""
         data = self._world.wait(until_ns)
-        ahead_ns = self._world.clock.now_ns() - (time.monotonic_ns() - self._began_ns)
-        if ahead_ns > 0:
-            time.sleep(ahead_ns / 1e9)
+        self._wall.sleep_until(self._world.clock.now_ns() + self._ahead_ns)
         return data
 
     def close(self) -> None:
@@ -97,7 +95,7 @@ class SimBackend:
         }
         return Connection(
             clock=clock,
-            link=PacedWorld(world) if options.real_time else world,
+            link=PacedWorld(world, MonotonicClock()) if options.real_time else world,
             acquisition=world.acquisition,
             simulated=True,
             about=about,

@@ -24,6 +24,13 @@ _KEYS: dict[str, tuple[str, str, bool, float, float]] = {
     "ppm": ("ppm", "how much too fast the box's clock runs", False, -5_000, 5_000),
     "corrupt_bytes": ("count", "bytes flipped on the link, either way", True, 0, 1e6),
     "drop_bytes": ("count", "bytes lost on the link, either way", True, 0, 1e6),
+    "stall_ms": (
+        "ms",
+        "the link stands still once; beyond 250 ms the box disarms itself",
+        False,
+        0,
+        60_000,
+    ),
     "box_reset_at_s": ("s", "the box starts anew, this long into the session", False, 0, 1e6),
     "cable_pull_at_s": ("s", "the link goes dead, this long into the session", False, 0, 1e6),
 }
@@ -40,6 +47,7 @@ class Faults(Struct, frozen=True):
     ppm: float | None = None
     corrupt_bytes: int | None = None
     drop_bytes: int | None = None
+    stall_ms: float | None = None
     box_reset_at_s: float | None = None
     cable_pull_at_s: float | None = None
 
@@ -130,7 +138,9 @@ def plant(faults: Faults, knobs: SimKnobs, plan: Plan, seed: int) -> SimKnobs:
 
 
 class WireFaults:
-    """Damages chunks on the wire: the first one in its direction after each drawn time."""
+    """Damages chunks on the wire, the first one in its direction after each drawn time; and
+    keeps both directions standing still for one stretch.
+    """
 
     def __init__(self, faults: Faults, duration_ns: int, seed: int) -> None:
         rng = stream(seed, "wire faults")
@@ -142,7 +152,8 @@ class WireFaults:
                 self._due[n % 2 == 0].append((at_ns, what, float(rng.random())))
         for due in self._due.values():
             due.sort(reverse=True)
-        self.done = 0
+        self.stall_from_ns = round(rng.uniform(0.3, 0.7) * duration_ns)
+        self.stall_to_ns = self.stall_from_ns + round((faults.stall_ms or 0) * 1e6)
 
     def on_the_way(self, data: bytes, to_box: bool, at_ns: int) -> bytes:
         """Return ``data`` as it arrives."""
@@ -150,7 +161,6 @@ class WireFaults:
         while due and due[-1][0] <= at_ns and data:
             _, what, where = due.pop()
             at = int(where * len(data))
-            self.done += 1
             if what == "flip":
                 data = data[:at] + bytes([data[at] ^ 1 << at % 8]) + data[at + 1 :]
             else:

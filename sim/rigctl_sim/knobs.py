@@ -10,7 +10,7 @@ from msgspec import Meta, Struct, field
 from rigctl.errors import InputError, nearest
 
 Ms = Annotated[float, Meta(ge=-1_000, le=1_000)]
-PositiveMs = Annotated[float, Meta(ge=0, le=100_000)]
+Ordinal = Annotated[int, Meta(ge=1)]
 Fraction = Annotated[float, Meta(ge=0, le=1)]
 
 
@@ -58,34 +58,50 @@ class ScriptedKnobs(Knobs, frozen=True):
     miss_probability: Annotated[Fraction, Meta(description="a spike pulse evokes none")] = 0.0
     doublet_probability: Annotated[Fraction, Meta(description="… evokes two")] = 0.0
     miss_at: Annotated[
-        list[int], Meta(description="ordinals of spike pulses, from 1, that evoke none")
+        list[Ordinal], Meta(description="ordinals of spike pulses, from 1, that evoke none")
     ] = field(default_factory=list)
-    doublet_at: Annotated[list[int], Meta(description="… that evoke two")] = field(
+    doublet_at: Annotated[list[Ordinal], Meta(description="… that evoke two")] = field(
         default_factory=list
     )
-    doublet_gap_ms: Annotated[float, Meta(gt=0, le=100)] = 6.0
-    spontaneous_hz: Annotated[float, Meta(ge=0, le=100)] = 0.0
-    rest_mv: Annotated[float, Meta(ge=-120, le=0)] = -70.0
+    doublet_gap_ms: Annotated[
+        float, Meta(gt=0, le=100, description="from the first spike of a doublet to the second")
+    ] = 6.0
+    spontaneous_hz: Annotated[
+        float, Meta(ge=0, le=100, description="rate of spontaneous spikes")
+    ] = 0.0
+    rest_mv: Annotated[float, Meta(ge=-120, le=0, description="resting potential")] = -70.0
     epsp_mv: Annotated[float, Meta(ge=0, le=50, description="for strength 1")] = 3.0
-    rise_ms: Annotated[float, Meta(gt=0, le=100)] = 1.2
-    decay_ms: Annotated[float, Meta(gt=0, le=1_000)] = 14.0
-    input_resistance_mohm: Annotated[float, Meta(gt=0, le=10_000)] = 150.0
+    rise_ms: Annotated[
+        float, Meta(gt=0, le=100, description="time constant of the EPSP's rise")
+    ] = 1.2
+    decay_ms: Annotated[float, Meta(gt=0, le=1_000, description="… of its decay")] = 14.0
+    input_resistance_mohm: Annotated[
+        float, Meta(gt=0, le=10_000, description="as a long step sees it")
+    ] = 150.0
     series_resistance_mohm: Annotated[
         float, Meta(ge=0, le=1_000, description="not bridge-balanced")
     ] = 15.0
-    membrane_tau_ms: Annotated[float, Meta(gt=0, le=1_000)] = 18.0
+    membrane_tau_ms: Annotated[
+        float, Meta(gt=0, le=1_000, description="how slowly a step charges the cell")
+    ] = 18.0
     noise_mv: Annotated[float, Meta(ge=0, le=10, description="SD of the recorded noise")] = 0.12
-    artefact_mv: Annotated[float, Meta(ge=-500, le=500)] = 15.0
+    artefact_mv: Annotated[
+        float, Meta(ge=-500, le=500, description="stimulus artefact at its beginning")
+    ] = 15.0
 
 
 class ConductanceKnobs(Knobs, frozen=True):
     """The cell that is integrated; see :mod:`rigctl_sim.conductance`."""
 
     epsp_mv: Annotated[float, Meta(ge=0, le=50, description="for strength 1, at rest")] = 3.0
-    rise_ms: Annotated[float, Meta(gt=0, le=100)] = 0.5
-    decay_ms: Annotated[float, Meta(gt=0, le=1_000)] = 4.0
-    capacitance_pf: Annotated[float, Meta(gt=1, le=10_000)] = 100.0
-    holding_pa: Annotated[float, Meta(ge=-10_000, le=10_000)] = 0.0
+    rise_ms: Annotated[float, Meta(gt=0, le=100, description="… of the conductance's rise")] = 0.5
+    decay_ms: Annotated[float, Meta(gt=0, le=1_000, description="… of its decay")] = 4.0
+    capacitance_pf: Annotated[
+        float, Meta(gt=1, le=10_000, description="of the whole cell; scales all currents")
+    ] = 100.0
+    holding_pa: Annotated[
+        float, Meta(ge=-10_000, le=10_000, description="constant current through the electrode")
+    ] = 0.0
     series_resistance_mohm: Annotated[
         float, Meta(ge=0, le=1_000, description="not bridge-balanced")
     ] = 15.0
@@ -95,19 +111,31 @@ class ConductanceKnobs(Knobs, frozen=True):
     noise_pa: Annotated[
         float, Meta(ge=0, le=1_000, description="SD of the current noise inside a window")
     ] = 30.0
-    noise_tau_ms: Annotated[float, Meta(gt=0, le=1_000)] = 3.0
-    recording_noise_mv: Annotated[float, Meta(ge=0, le=10)] = 0.1
-    artefact_mv: Annotated[float, Meta(ge=-500, le=500)] = 15.0
+    noise_tau_ms: Annotated[
+        float, Meta(gt=0, le=1_000, description="correlation time of the current noise")
+    ] = 3.0
+    recording_noise_mv: Annotated[
+        float, Meta(ge=0, le=10, description="SD of the recorded noise")
+    ] = 0.1
+    artefact_mv: Annotated[
+        float, Meta(ge=-500, le=500, description="stimulus artefact at its beginning")
+    ] = 15.0
 
 
 class SynapseKnobs(Knobs, frozen=True):
     """One pathway's synapses."""
 
     use: Annotated[float, Meta(gt=0, le=1, description="U of Tsodyks & Markram 1997")] = 0.5
-    tau_rec_ms: Annotated[float, Meta(gt=0, le=100_000)] = 800.0
-    tau_inact_ms: Annotated[float, Meta(ge=0, le=1_000)] = 3.0
+    tau_rec_ms: Annotated[float, Meta(gt=0, le=100_000, description="recovery from depression")] = (
+        800.0
+    )
+    tau_inact_ms: Annotated[
+        float, Meta(ge=0, le=1_000, description="inactivation of what was released")
+    ] = 3.0
     sites: Annotated[int, Meta(ge=1, le=10_000, description="release sites")] = 12
-    quantal_cv: Annotated[float, Meta(ge=0, le=2)] = 0.2
+    quantal_cv: Annotated[
+        float, Meta(ge=0, le=2, description="coefficient of variation of one quantum")
+    ] = 0.2
     plasticity_scale: Annotated[
         float, Meta(ge=0, le=10, description="0 switches the hidden rule off")
     ] = 1.0
@@ -122,18 +150,29 @@ class SynapseKnobs(Knobs, frozen=True):
 class AcquisitionKnobs(Knobs, frozen=True):
     """Sweeps around the pulses."""
 
-    on: bool = True
-    rate_hz: Annotated[float, Meta(ge=100, le=200_000)] = 10_000.0
-    before_ms: Annotated[float, Meta(ge=0, le=10_000)] = 50.0
-    after_ms: Annotated[float, Meta(gt=0, le=10_000)] = 400.0
-    longest_s: Annotated[float, Meta(ge=0.1, le=60)] = 10.0
-    mv_per_count: Annotated[float, Meta(gt=0, le=1)] = 0.005
+    on: Annotated[bool, Meta(description="record sweeps at all")] = True
+    rate_hz: Annotated[float, Meta(ge=100, le=200_000, description="samples per second")] = 10_000.0
+    before_ms: Annotated[
+        float, Meta(ge=0, le=10_000, description="a sweep begins so long before its first pulse")
+    ] = 50.0
+    after_ms: Annotated[
+        float, Meta(gt=0, le=10_000, description="and ends so long after its last one began")
+    ] = 400.0
+    longest_s: Annotated[
+        float, Meta(ge=0.1, le=60, description="a longer one goes on as the next sweep")
+    ] = 10.0
+    mv_per_count: Annotated[float, Meta(gt=0, le=1, description="resolution of the converter")] = (
+        0.005
+    )
 
 
 class SimKnobs(Knobs, frozen=True):
     """The whole ``[sim]`` table."""
 
-    cell: Literal["scripted", "conductance"] = "scripted"
+    cell: Annotated[
+        Literal["scripted", "conductance"],
+        Meta(description="spikes drawn, or integrated from conductances"),
+    ] = "scripted"
     clock: ClockKnobs = ClockKnobs()
     wire: WireKnobs = WireKnobs()
     scripted: ScriptedKnobs = ScriptedKnobs()

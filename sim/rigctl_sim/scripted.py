@@ -20,10 +20,9 @@ from rigctl_sim.streams import stream, stream_key
 
 Floats = npt.NDArray[np.float64]
 
-# How long an event of each kind still shows in the trace.
-_EPSP_SHOWS_NS = 200_000_000
-_SPIKE_SHOWS_NS = 40_000_000
-_STEP_SHOWS_NS = 200_000_000
+# How long an event of each kind still shows in the trace: until less than a microvolt is left.
+_SHOWS_TAUS = 14.0
+_SPIKE_SHOWS_NS = 160_000_000
 _ARTEFACT_SHOWS_NS = 5_000_000
 _ARTEFACT_MS = 0.25
 _SPIKE_MV, _SPIKE_WIDTH_MS, _AFTER_MV, _AFTER_MS = 100.0, 0.35, 6.0, 8.0
@@ -60,6 +59,8 @@ class ScriptedCell:
         self._shown_spikes: deque[int] = deque()
         self._steps: deque[tuple[int, int, float]] = deque()
         self._artefacts: deque[int] = deque()
+        self._epsp_shows_ns = round(max(knobs.rise_ms, knobs.decay_ms) * _SHOWS_TAUS * 1e6)
+        self._step_shows_ns = round(knobs.membrane_tau_ms * _SHOWS_TAUS * 1e6)
         self._decays: dict[tuple[float, float], Floats] = {}
 
     def _own_interval_ns(self) -> int:
@@ -136,7 +137,7 @@ class ScriptedCell:
             decay_ms *= 1.0001
         scale = 1 / _epsp_peak(rise_ms, decay_ms)
         for onset_ns, amplitude_mv in self._epsps:
-            part, ms = stretch(onset_ns, _EPSP_SHOWS_NS)
+            part, ms = stretch(onset_ns, self._epsp_shows_ns)
             shape = self._decay(decay_ms, ms, len(part), rate_hz)
             shape -= self._decay(rise_ms, ms, len(part), rate_hz)
             shape *= amplitude_mv * scale
@@ -148,7 +149,7 @@ class ScriptedCell:
             part, ms = stretch(at_ns, width_ns)
             part -= full_mv * self._decay(tau_ms, ms, len(part), rate_hz)
             part += full_mv + knobs.series_resistance_mohm * mv_per_mohm
-            part, ms = stretch(at_ns + width_ns, _STEP_SHOWS_NS)
+            part, ms = stretch(at_ns + width_ns, self._step_shows_ns)
             left_mv = full_mv * (1 - exp(-width_ms / tau_ms))
             part += left_mv * self._decay(tau_ms, ms, len(part), rate_hz)
         for at_ns in self._artefacts:
@@ -177,11 +178,11 @@ class ScriptedCell:
 
     def forget(self, before_ns: int) -> None:
         """Drop what cannot show any more."""
-        while self._epsps and self._epsps[0][0] + _EPSP_SHOWS_NS < before_ns:
+        while self._epsps and self._epsps[0][0] + self._epsp_shows_ns < before_ns:
             self._epsps.popleft()
         while self._shown_spikes and self._shown_spikes[0] + _SPIKE_SHOWS_NS < before_ns:
             self._shown_spikes.popleft()
-        while self._steps and sum(self._steps[0][:2]) + _STEP_SHOWS_NS < before_ns:
+        while self._steps and sum(self._steps[0][:2]) + self._step_shows_ns < before_ns:
             self._steps.popleft()
         while self._artefacts and self._artefacts[0] + _ARTEFACT_SHOWS_NS < before_ns:
             self._artefacts.popleft()

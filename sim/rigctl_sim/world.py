@@ -85,15 +85,16 @@ class World:
 
     def wait(self, until_ns: int) -> bytes:
         """Let the world run until something has arrived, at latest until ``until_ns``."""
-        clock = self.clock
-        while True:
-            now_ns = clock.now_ns()
-            if self._to_host and self._to_host[0][0] <= now_ns:
-                return self._arrived(now_ns)
-            if now_ns >= until_ns or self.acquisition.waiting:
+        clock, to_host, acquisition = self.clock, self._to_host, self.acquisition
+        last_ns = min(until_ns, self._dead_at_ns)
+        now_ns = clock.now_ns()
+        while not (to_host and to_host[0][0] <= now_ns):
+            if now_ns >= until_ns or acquisition.waiting:
                 return b""
-            self._step(min(until_ns, self._dead_at_ns))
-            self._check_cable(clock.now_ns())
+            self._step(last_ns, now_ns)
+            now_ns = clock.now_ns()
+            self._check_cable(now_ns)
+        return self._arrived(now_ns)
 
     def close(self) -> None:
         """Nothing holds the simulated link."""
@@ -115,27 +116,30 @@ class World:
         wire = self._wire
         delay_us = wire.delay_min_us + wire.delay_spread_us * self._delays.pop()
         delay_us += wire.us_per_byte * size
-        arrival_ns = max(now_ns + round(delay_us * 1000), self._last_arrival[to_box] + 1)
+        arrival_ns = now_ns + round(delay_us * 1000)
+        faults = self._wire_faults
+        if faults.stall_from_ns <= arrival_ns < faults.stall_to_ns:
+            arrival_ns = faults.stall_to_ns
+        arrival_ns = max(arrival_ns, self._last_arrival[to_box] + 1)
         self._last_arrival[to_box] = arrival_ns
         return arrival_ns
 
     # --- one event after another ------------------------------------------------------------
 
-    def _step(self, until_ns: int) -> None:
-        """Run the world to its next event, or to ``until_ns``."""
-        at_ns = until_ns if until_ns < self._box_ns else self._box_ns
+    def _step(self, until_ns: int, now_ns: int) -> None:
+        """Run the world to its next event, or to ``until_ns``.
+
+        Most steps carry a keep-alive or nothing: what was not touched is not asked.
+        """
+        at_ns = min(until_ns, self._box_ns, self._reset_at_ns, self.acquisition.due_ns)
         if self._to_box and self._to_box[0][0] < at_ns:
             at_ns = self._to_box[0][0]
         if self._to_host and self._to_host[0][0] < at_ns:
             at_ns = self._to_host[0][0]
         if self._effects and self._effects[0][0] < at_ns:
             at_ns = self._effects[0][0]
-        sweep_ns = self.acquisition.due_ns()
-        if sweep_ns is not None and sweep_ns < at_ns:
-            at_ns = sweep_ns
-        if self._reset_at_ns < at_ns:
-            at_ns = self._reset_at_ns
-        at_ns = max(at_ns, self.clock.now_ns())
+        if at_ns < now_ns:
+            at_ns = now_ns
         peak_ns = self._cell.advance(at_ns)
         if peak_ns is not None:
             self.clock.sleep_until(peak_ns)
@@ -145,10 +149,10 @@ class World:
         while self._effects and self._effects[0][0] <= at_ns:
             heapq.heappop(self._effects)[2](at_ns)
         if self._box_ns <= at_ns:
-            self._run_box(self._box_clock.tick_at(at_ns))
+            self._run_box(at_ns)
         if self._to_box and self._to_box[0][0] <= at_ns:
             self._deliver(self._to_box.popleft()[1], at_ns)
-        if sweep_ns is not None and sweep_ns <= at_ns:
+        if self.acquisition.due_ns <= at_ns:
             self.acquisition.complete()
         if at_ns >= self._reset_at_ns:
             self._reset_box(at_ns)
@@ -159,17 +163,18 @@ class World:
         """Bytes reach the box; what a stop or a disarm has set low takes effect at once."""
         if self._damaging:
             data = self._wire_faults.on_the_way(data, True, at_ns)
-        tick = self._box_clock.tick_at(at_ns)
-        self._box.receive(data, tick)
+        self._box.receive(data, self._box_clock.tick_at(at_ns))
         self._box_touched = True
         if self._box.edges_waiting:
-            self._run_box(tick)
+            self._run_box(at_ns)
 
-    def _run_box(self, tick: int) -> None:
+    def _run_box(self, now_ns: int) -> None:
+        """Let the box catch up with the world; what it fires acts from now on."""
         self._box_touched = True
-        for line, level, edge_tick in self._box.advance(tick):
+        for line, level, tick in self._box.advance(self._box_clock.tick_at(now_ns)):
             if level:
-                self._output(line, self._box_clock.first_ns_of(edge_tick))
+                # The first moment of a tick may have passed when the box learnt of it.
+                self._output(line, max(now_ns, self._box_clock.first_ns_of(tick)))
 
     def _collect(self, now_ns: int) -> None:
         """Take what the box sends, and note when it wants to run next."""
@@ -244,7 +249,7 @@ class World:
     def _input(self, name: str, level: bool, at_ns: int) -> None:
         tick = self._box_clock.tick_at(at_ns)
         if tick >= 0:
-            self._run_box(tick)
+            self._run_box(at_ns)
             self._box.input_edge(name, level, tick)
 
 

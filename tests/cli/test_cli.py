@@ -203,3 +203,20 @@ def test_verify_finds_a_mismatch_with_6(short_record: Path, tmp_path: Path) -> N
     done = run("verify", copy, "--json")
     assert done.returncode == 6
     assert json.loads(done.stdout)["findings"] == ["session.sha256 is not beside the closed record"]
+
+
+@pytest.mark.parametrize("which", ["protocol", "rig", "sim"])
+def test_schemas_are_printed(which: str) -> None:
+    assert "properties" in json.dumps(json.loads(run("schema", which).stdout))
+
+
+def test_every_knob_of_the_simulated_rig_is_described() -> None:
+    made = json.loads(run("schema", "sim").stdout)
+    knobs = [
+        (name, key, knob)
+        for name, table in made["$defs"].items()
+        for key, knob in table.get("properties", {}).items()
+        if "$ref" not in json.dumps(knob)
+    ]
+    assert len(knobs) > 30
+    assert [(n, k) for n, k, knob in knobs if "description" not in json.dumps(knob)] == []

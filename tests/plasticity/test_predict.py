@@ -41,6 +41,15 @@ def test_parameters_of_ones_own() -> None:
     assert as_json(made)["change_pct"] == pytest.approx(3.678794)
 
 
+def test_more_pairs_than_the_source_had_are_said_to_extrapolate() -> None:
+    rows = "".join(f"{n},pre\n{n}.01,post\n" for n in range(61))
+    made = predict("at_s,side\n" + rows, "s.csv", rule="pair-all", set_name="bi-poo-2001")
+    assert "EXTRAPOLATION: 61 pairings extrapolate" in as_text(made)
+    few = predict("at_s,side\n" + rows[: rows.index("60,pre")], "s.csv", rule="pair-all",
+                  set_name="bi-poo-2001")  # fmt: skip
+    assert few.extrapolation is None
+
+
 @pytest.mark.parametrize(
     ("text", "sentence"),
     [

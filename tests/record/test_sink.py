@@ -79,3 +79,15 @@ def test_a_full_disk_is_told_at_the_next_call_and_never_closed_as_finished() -> 
         sink.close(finished=True)
     assert inner.closed_as is False
     assert [r.id for r in inner.rows] == [1]  # type: ignore[attr-defined]
+
+
+def test_a_beginning_that_fails_leaves_nothing(
+    tmp_path: Path, monkeypatch: pytest.MonkeyPatch
+) -> None:
+    def fail(table: type[Row]) -> str:
+        raise sqlite3.OperationalError("database or disk is full")
+
+    monkeypatch.setattr("rigctl.record.sqlite.create_sql", fail)
+    with pytest.raises(InputError, match="cannot be made there: database or disk is full"):
+        SqliteSink(tmp_path / "session.sqlite")
+    assert list(tmp_path.iterdir()) == []

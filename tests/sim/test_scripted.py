@@ -2,8 +2,12 @@
 
 from __future__ import annotations
 
+import math
+
 import numpy as np
 import pytest
+from hypothesis import given
+from hypothesis import strategies as st
 
 from rigctl_sim.knobs import ScriptedKnobs
 from rigctl_sim.scripted import PulseLine, ScriptedCell
@@ -79,6 +83,53 @@ def test_the_trace_shows_epsp_step_spike_and_is_the_same_each_time() -> None:
     assert abs(int(np.argmax(trace)) - (peak_ns - S + 100_000_000) / 1e5) <= 1
     noisy = ScriptedCell(ScriptedKnobs(), LINES, 10, seed=1)
     assert np.array_equal(noisy.trace_mv(S, 500, 10_000), noisy.trace_mv(S, 500, 10_000))
+
+
+def _naive_mv(at_ms: float, knobs: ScriptedKnobs) -> float:
+    """The templates' sum written out: EPSP at 0, step from 30 to 330 ms, spike at 500."""
+    v = knobs.rest_mv
+    rise, decay, tau = knobs.rise_ms, knobs.decay_ms, knobs.membrane_tau_ms
+    if at_ms >= 0:
+        top = math.log(decay / rise) * rise * decay / (decay - rise)
+        height = math.exp(-top / decay) - math.exp(-top / rise)
+        v += knobs.epsp_mv * (math.exp(-at_ms / decay) - math.exp(-at_ms / rise)) / height
+    if 30 <= at_ms < 330:
+        v += -20e-3 * knobs.series_resistance_mohm
+        v += -20e-3 * knobs.input_resistance_mohm * (1 - math.exp(-(at_ms - 30) / tau))
+    if at_ms >= 330:
+        full = -20e-3 * knobs.input_resistance_mohm * (1 - math.exp(-300 / tau))
+        v += full * math.exp(-(at_ms - 330) / tau)
+    since = at_ms - 500
+    if since >= -2:
+        v += 100 * math.exp(-((since / 0.35) ** 2) / 2)
+    if since > 0:
+        v -= 6 * since / 8 * math.exp(1 - since / 8)
+    return v
+
+
+@given(
+    start_us=st.integers(-60_000, 520_000),
+    rate_hz=st.sampled_from([1_000.0, 10_000.0, 25_000.0]),
+    decay_ms=st.floats(2, 40),
+    tau_ms=st.floats(3, 60),
+)
+def test_the_trace_is_its_templates_sum_wherever_it_is_cut(
+    start_us: int, rate_hz: float, decay_ms: float, tau_ms: float
+) -> None:
+    knobs = ScriptedKnobs(noise_mv=0, decay_ms=decay_ms, membrane_tau_ms=tau_ms)
+    exact = {"post1": PulseLine(0.0, True, 3_000_000, 0), "step1": LINES["step1"]}
+    cell = ScriptedCell(knobs, exact, 10, seed=1)
+    cell.epsp(S, "s1", 1.0)
+    cell.current(S + 30_000_000, 300_000_000, "step1")
+    cell.current(S + 497_000_000, 1_000, "post1")
+    assert cell.advance(3 * S) == S + 500_000_000
+    trace = cell.trace_mv(S + start_us * 1_000, 300, rate_hz)
+    at_ms = start_us / 1000 + np.arange(300) * 1000 / rate_hz
+    # Samples at an edge, where rounding may put them on either side, are left out.
+    clear = np.abs(at_ms[:, None] - [0, 30, 330, 497.001, 498]).min(axis=1) > 1e-6
+    expected = np.array([_naive_mv(ms, knobs) for ms in at_ms])
+    # The templates end when a microvolt is left.
+    assert trace[clear] == pytest.approx(expected[clear], abs=1e-3)
 
 
 def test_forgetting_keeps_what_still_shows() -> None:

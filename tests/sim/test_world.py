@@ -12,7 +12,9 @@ from rigctl.backends.base import Connection, OpenOptions
 from rigctl.errors import InputError, LinkError
 from rigctl.link import messages as msg
 from rigctl.link.frames import FrameReader, encode_frame
-from rigctl_sim import faults
+from rigctl.timing.clock import VirtualClock
+from rigctl_sim import backend, faults
+from rigctl_sim.backend import SimBackend
 from rigctl_sim.knobs import knobs_of
 from tests.conftest import make_plan, make_rig
 
@@ -106,12 +108,42 @@ def test_faults_of_the_scripted_cell_are_refused_for_the_other() -> None:
         ({"scripted": {"creep_mss": 1}}, 'did you mean "creep_ms"'),
         ({"scripted": {"creep_ms": 100}}, "<= 20"),
         ({"cell": "other"}, "Invalid enum value"),
+        ({"scripted": {"miss_at": [0]}}, "scripted.miss_at"),
+        ({"clock": {"ppm": float("nan")}}, "clock.ppm"),
     ],
 )
 def test_wrong_knobs_get_a_sentence(options: dict[str, object], sentence: str) -> None:
     with pytest.raises(InputError) as caught:
         knobs_of(options)
     assert sentence in str(caught.value)
+
+
+def test_every_knob_is_described() -> None:
+    schema = SimBackend().knobs_schema()
+    tables = schema["$defs"]
+    assert len(tables) == 7
+    for table in tables.values():
+        for knob in table["properties"].values():
+            alternatives = [knob, *knob.get("anyOf", [])]
+            assert any("description" in a or "$ref" in str(a) for a in alternatives), knob
+
+
+def test_at_the_pace_of_the_wall_clock_the_bytes_are_the_same(
+    monkeypatch: pytest.MonkeyPatch,
+) -> None:
+    wall = VirtualClock(77 * S)
+    monkeypatch.setattr(backend, "MonotonicClock", lambda: wall)
+    rig = make_rig()
+    plan = make_plan(rig=rig)
+    paced = SimBackend().open(rig, plan, OpenOptions(1, "", real_time=True))
+    free = SimBackend().open(rig, plan, OpenOptions(1, ""))
+    for n in range(1, 8):
+        for connection in (paced, free):
+            connection.link.write(PING)
+        assert paced.link.wait(n * S) == free.link.wait(n * S)
+        assert paced.clock.now_ns() == free.clock.now_ns()
+        # The wall has caught up with the virtual clock, and no more than that.
+        assert wall.now_ns() == 77 * S + paced.clock.now_ns()
 
 
 def test_a_synapse_of_no_pathway_is_refused() -> None:
