@@ -91,7 +91,7 @@ class Runtime:
         self._done = False
         self._opened_host_ns = 0
         self._link_gone = False
-        self._probe_wanted = False
+        self._probe_asked_ns: int | None = None
 
     # --- the loop ---------------------------------------------------------------------------
 
@@ -243,8 +243,9 @@ class Runtime:
             case link.Pong():
                 self._hear_pong(event)
             case link.Complete():
-                if self._probe_wanted:
-                    self._probe_wanted = False
+                # An answer to an earlier ping does not hold what was asked for since.
+                if self._probe_asked_ns is not None and event.asked_ns >= self._probe_asked_ns:
+                    self._probe_asked_ns = None
                     self._take(inp.Complete(at_ns, event.through_tick))
             case link.BoxHello():
                 self._hear_hello(event)
@@ -341,7 +342,7 @@ class Runtime:
             case act.Withdraw():
                 self._withdraw(action.ids, now_ns)
             case act.Probe():
-                self._probe_wanted = True
+                self._probe_asked_ns = now_ns
                 self._ping(now_ns)
             case act.AskOperator():
                 self._operator.asked(action.phase, action.text, self._session_now())

@@ -95,9 +95,13 @@ class Pong(LinkEvent, frozen=True):
 
 
 class Complete(LinkEvent, frozen=True):
-    """Everything the box saw up to ``through_tick`` has been delivered as journal entries."""
+    """Everything the box saw up to ``through_tick`` has been delivered as journal entries.
+
+    ``asked_ns`` is the host time of the ping that was answered so.
+    """
 
     through_tick: int
+    asked_ns: int
 
 
 class Damaged(LinkEvent, frozen=True):
@@ -193,7 +197,7 @@ class HostLink:
         self._ping_since_ns: int | None = None
         self._ping_sent_ns = 0
         self._ping_times = 0
-        self._completes: deque[tuple[int, int]] = deque()
+        self._completes: deque[tuple[int, int, int]] = deque()
         self._handlers = {
             msg.HelloAnswer: self._on_hello,
             msg.LineName: self._on_line,
@@ -479,15 +483,15 @@ class HostLink:
         t2_tick = self._unwrap(message.rx_tick)
         self._credit(message.credits)
         events.append(Pong(sent_ns, t2_tick, self._tick, now_ns))
-        self._completes.append((message.next_seq, self._tick))
+        self._completes.append((message.next_seq, self._tick, sent_ns))
         self._tell_complete(events)
 
     def _tell_complete(self, events: list[LinkEvent]) -> None:
-        through = None
+        last = None
         while self._completes and self._next_entry >= self._completes[0][0]:
-            through = self._completes.popleft()[1]
-        if through is not None:
-            events.append(Complete(through))
+            last = self._completes.popleft()
+        if last is not None:
+            events.append(Complete(last[1], last[2]))
 
     def _on_journal(self, message: msg.Journal, now_ns: int, events: list[LinkEvent]) -> None:
         self._ack_owed = True

@@ -169,12 +169,11 @@ class World:
             self._run_box(at_ns)
 
     def _run_box(self, now_ns: int) -> None:
-        """Let the box catch up with the world; what it fires acts from now on."""
+        """Let the box catch up with the world; what it fires acts on the cell."""
         self._box_touched = True
         for line, level, tick in self._box.advance(self._box_clock.tick_at(now_ns)):
             if level:
-                # The first moment of a tick may have passed when the box learnt of it.
-                self._output(line, max(now_ns, self._box_clock.first_ns_of(tick)))
+                self._output(line, self._box_clock.first_ns_of(tick))
 
     def _collect(self, now_ns: int) -> None:
         """Take what the box sends, and note when it wants to run next."""

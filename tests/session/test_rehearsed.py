@@ -9,6 +9,9 @@ from typing import Any
 import msgspec
 import pytest
 
+from rigctl.backends.base import OpenOptions
+from rigctl.execute import execute
+from rigctl.operator import StandIn
 from rigctl.plasticity import rule
 from rigctl.plasticity.sets import SETS
 from rigctl.record.read import Record, open_record
@@ -16,7 +19,7 @@ from rigctl.record.verify import verify
 from rigctl.report.summary import summarise
 from rigctl_sim.knobs import SimKnobs
 from rigctl_sim.world import World
-from tests.conftest import RIG_TEXT, SHORT, rehearsed
+from tests.conftest import RIG_TEXT, SHORT, prepared, rehearsed
 
 S = 1_000_000_000
 
@@ -253,3 +256,41 @@ def test_a_box_without_the_line_is_refused(tmp_path: Path, monkeypatch: pytest.M
     with open_record(ended.record) as record:
         assert "no line pre1" in record.bodies("ended")[0]["text"]
         assert record.triggers == []
+
+
+@pytest.mark.parametrize("command", ["pause", "end_induction", "resume"])
+def test_at_a_gate_there_is_nothing_to_pause_or_end(command: str, tmp_path: Path) -> None:
+    """The gate before the follow-up waits for a go that comes late."""
+
+    class Late(StandIn):
+        def asked(self, phase: str, text: str, now_ns: int) -> None:
+            self._commands += [(now_ns + 2 * S, command, ""), (now_ns + 5 * S, "go", "")]
+
+    protocol = SHORT.replace('kind = "follow_up"', 'kind = "follow_up"\nstart = "operator"')
+    ended = execute(prepared(tmp_path, protocol), tmp_path / "out", OpenOptions(1), operator=Late())
+    assert ended.how == "as_planned"
+    with open_record(ended.record) as record:
+        assert [a["name"] for a in record.bodies("alarm")] == ["not_possible"]
+        assert [p["name"] for p in record.bodies("phase_end")] == [
+            "baseline", "induction", "follow_up",
+        ]  # fmt: skip
+        assert [g["verdict"] for g in record.bodies("gate")] == ["asked", "pass"]
+    assert verify(ended.record).ok
+
+
+def test_abandoning_during_a_pause_keeps_what_was_delivered(tmp_path: Path) -> None:
+    commands = [(40 * S, "pause", ""), (50 * S, "abandon", "")]
+    ended = rehearsed(tmp_path, commands=commands)
+    assert (ended.how, ended.exit_code) == ("abandoned", 4)
+    counts = _summary(ended.record)["pairings"]
+    assert counts["on_target"] > 0
+    assert counts["on_target"] + counts["not_run"] == 12
+    assert verify(ended.record).ok
+
+
+def test_what_the_box_still_tells_after_the_disarming_is_in_the_record(tmp_path: Path) -> None:
+    ended = rehearsed(tmp_path, commands=[(38_200_000_000, "abandon", "")])
+    with open_record(ended.record) as record:
+        # Pulses that waited in the box's queue come back as cancelled, none of them as unknown.
+        fates = {t.fate for t in record.triggers}
+        assert fates == {"fired", "cancelled"}
