@@ -8,6 +8,6 @@ from pathlib import Path
 
 HERE = Path(__file__).parent
 
-for name in ("help", "sessions", "growth"):
+for name in ("help", "keep_alive", "sessions", "growth"):
     print(f"--- {name}", flush=True)
     subprocess.run([sys.executable, HERE / f"{name}.py"], check=True)

@@ -1,4 +1,7 @@
-"""Frames: length, payload and CRC-32C, stuffed by COBS, ended by a zero byte.
+"""Frames: length, payload and CRC-32C, stuffed by COBS, between two zero bytes.
+
+The end alone would do to cut the stream; the zero in front keeps a hit end from costing the next
+frame too, and with it a second keep-alive.
 
 COBS: Cheshire & Baker 1999, IEEE/ACM Transactions on Networking 7:159. A hit COBS code byte
 multiplies errors in the decoded frame, which is why the length travels too and is checked.
@@ -41,7 +44,7 @@ def crc32c(data: bytes) -> int:
 
 @lru_cache(maxsize=64)
 def encode_frame(payload: bytes) -> bytes:
-    """Return the bytes that carry ``payload`` on the wire, the ending zero included.
+    """Return the bytes that carry ``payload`` on the wire, both zeros included.
 
     Raises
     ------
@@ -52,7 +55,7 @@ def encode_frame(payload: bytes) -> bytes:
         raise ValueError(f"a payload has 1 to {MAX_PAYLOAD} bytes, not {len(payload)}")
     body = bytes([len(payload)]) + payload
     stuffed: bytes = cobs.encode(body + crc32c(body).to_bytes(_CRC_BYTES, "little"))
-    return stuffed + b"\0"
+    return b"\0" + stuffed + b"\0"
 
 
 @lru_cache(maxsize=64)

@@ -29,10 +29,19 @@ def test_trailing_bytes_belong_to_the_next_frame(payload: bytes, rest: bytes) ->
     assert reader.feed(encode_frame(payload) + rest) == [payload]
 
 
-def test_a_frame_never_holds_a_zero_but_at_its_end() -> None:
+def test_a_frame_holds_no_zero_but_at_its_two_ends() -> None:
     for payload in (b"\0" * MAX_PAYLOAD, bytes(range(MAX_PAYLOAD))):
         frame = encode_frame(payload)
-        assert frame.index(0) == len(frame) - 1
+        assert frame[0] == frame[-1] == 0
+        assert 0 not in frame[1:-1]
+
+
+def test_any_one_changed_byte_costs_one_frame_only() -> None:
+    first, second = encode_frame(b"first"), encode_frame(b"second")
+    for at in range(len(first)):
+        for bit in range(8):
+            hit = first[:at] + bytes([first[at] ^ 1 << bit]) + first[at + 1 :]
+            assert FrameReader().feed(hit + second)[-1] == b"second"
 
 
 @pytest.mark.parametrize("payload", [b"", b"x" * (MAX_PAYLOAD + 1)])
@@ -98,5 +107,5 @@ def test_damage_is_named(stuffed: bytes, what: str) -> None:
 
 def test_a_changed_bit_is_a_checksum_error() -> None:
     frame = bytearray(encode_frame(b"\x41\x42\x43"))
-    frame[3] ^= 1
-    assert decode_stuffed(bytes(frame[:-1])) == "checksum"
+    frame[4] ^= 1
+    assert decode_stuffed(bytes(frame[1:-1])) == "checksum"

@@ -8,7 +8,7 @@ import pytest
 
 from rigctl.record.read import open_record
 from rigctl.record.verify import verify
-from tests.conftest import RIG_TEXT, rehearsed
+from tests.conftest import EXAMPLES, RIG_TEXT, rehearsed
 
 CONDUCTANCE = RIG_TEXT.replace("amplitude_pa = 1500", "amplitude_pa = 700") + (
     '\n[sim]\ncell = "conductance"\n'
@@ -50,3 +50,20 @@ def test_a_session_runs_over_the_wrap_of_the_boxs_count(on_since_s: float, tmp_p
         fired = [t.fired_ns for t in record.triggers if t.fired_ns is not None]
         assert fired == sorted(fired)
         assert fired[-1] - fired[0] < 75_000_000_000
+
+
+@pytest.mark.soak
+def test_eight_hours_with_everything_planted(tmp_path: Path) -> None:
+    protocol = (EXAMPLES / "pre_post.toml").read_text(encoding="utf-8")
+    protocol = protocol.replace("duration_min = 30", "duration_min = 468")
+    ended = rehearsed(
+        tmp_path, protocol, faults="creep_ms=3,misses=8,doublets=3,corrupt_bytes=60,ppm=-200"
+    )
+    assert ended.how == "as_planned"
+    verdict = verify(ended.record)
+    assert verdict.ok
+    with open_record(ended.record) as record:
+        assert {t.fate for t in record.triggers} == {"fired"}
+        # The box's count wraps every 35.8 min: 13 times.
+        assert record.triggers[-1].fired_ns is not None
+        assert record.triggers[-1].fired_ns > 13 * 2_147_483_648_000
