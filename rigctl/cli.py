@@ -124,11 +124,23 @@ def check(protocol: Path, rig: Path | None, arm: int | None, as_json: bool) -> N
 
     prepared = _prepare(protocol, rig, arm)
     found = audit(prepared.plan, prepared.rig)
+    arms = _other_arms(protocol, rig, prepared) if arm is None else []
     if as_json:
-        _print_json(check_text.as_json(prepared.plan, found, prepared.verdicts))
+        made = check_text.as_json(prepared.plan, found, prepared.verdicts)
+        _print_json({**made, "arms": [check_text.arm_json(a) for a in arms]})
     else:
         _console().print(check_text.render(prepared.plan, found, prepared.verdicts))
-    limits.refuse(prepared.verdicts)
+        if arms:
+            _console().print(check_text.render_arms(arms))
+    for each in [prepared, *arms]:
+        limits.refuse(each.verdicts)
+
+
+def _other_arms(protocol: Path, rig: Path | None, first: Prepared) -> list[Prepared]:
+    """Compile every arm of an across-cells protocol (none where it is not one)."""
+    across = first.protocol.across_cells
+    count = len(across.dt_ms) if across is not None else 0
+    return [_prepare(protocol, rig, arm) for arm in range(1, count + 1)]
 
 
 @cli.command()

@@ -132,10 +132,17 @@ class _Compiler:
         chosen = self._protocol.forecasts
         if not chosen:
             return (resolve(None, self._rig.forecast_set, self._rig_file, "forecast_set"),)
-        return tuple(
-            resolve(choice, self._rig.forecast_set, self._where, f"forecast[{n}]")
-            for n, choice in enumerate(chosen, 1)
-        )
+        made: dict[tuple[str, str], RuleChoice] = {}
+        for n, choice in enumerate(chosen, 1):
+            found = resolve(choice, self._rig.forecast_set, self._where, f"forecast[{n}]")
+            key = (found.rule, found.parameter_set)
+            if key in made:
+                raise InputError(
+                    f"{self._where}: forecast[{n}]: {found.rule} with the set "
+                    f"{found.parameter_set} stands twice; a session keeps one forecast of each."
+                )
+            made[key] = found
+        return tuple(made.values())
 
     # --- counting before anything is expanded -----------------------------------------------
 

@@ -2,7 +2,7 @@
 
 from __future__ import annotations
 
-from typing import Any
+from typing import TYPE_CHECKING, Any
 
 import msgspec
 from rich.console import Console, ConsoleOptions, Group, RenderableType, RenderResult
@@ -12,6 +12,9 @@ from rich.text import Text
 from rigctl.protocol.audit import Audit, ForecastAudit
 from rigctl.protocol.plan import Plan
 from rigctl.safety.limits import PASSING_IS_NO_PERMISSION, Verdict
+
+if TYPE_CHECKING:
+    from rigctl.execute import Prepared
 
 _MOST_ROWS = 8
 
@@ -295,3 +298,20 @@ def as_json(plan: Plan, found: Audit, verdicts: list[Verdict]) -> dict[str, Any]
         "limits": msgspec.to_builtins(verdicts),
         "passing_is_no_permission": PASSING_IS_NO_PERMISSION,
     }
+
+
+def render_arms(arms: list[Prepared]) -> RenderableType:
+    """Return a line for each arm of an across-cells protocol."""
+    table = _table("Arms (what stands above is arm 1; see --arm)", "arm", "Δt", "plan hash")
+    for arm in arms:
+        data = arm_json(arm)
+        table.add_row(str(data["arm"]), f"{data['dt_ms']:+g} ms", data["plan_hash"][:16] + "…")
+    return Group("", table)
+
+
+def arm_json(arm: Prepared) -> dict[str, Any]:
+    """Return an arm's number, Δt and plan hash."""
+    across = arm.protocol.across_cells
+    assert across is not None
+    assert arm.arm is not None
+    return {"arm": arm.arm, "dt_ms": across.dt_ms[arm.arm - 1], "plan_hash": arm.plan.hash()}

@@ -220,3 +220,12 @@ def test_every_knob_of_the_simulated_rig_is_described() -> None:
     ]
     assert len(knobs) > 30
     assert [(n, k) for n, k, knob in knobs if "description" not in json.dumps(knob)] == []
+
+
+def test_check_compiles_every_arm_of_an_across_cells_protocol() -> None:
+    made = json.loads(run("check", EXAMPLES / "across_cells.toml", "--json").stdout)
+    assert [a["dt_ms"] for a in made["arms"]] == [-60, -30, -15, -5, 5, 15, 30, 60]
+    assert len({a["plan_hash"] for a in made["arms"]}) == 8
+    assert made["arms"][0]["plan_hash"] == made["plan_hash"]
+    shown = run("check", EXAMPLES / "across_cells.toml").stdout
+    assert "+60 ms" in shown

@@ -101,6 +101,9 @@ PROTOCOL_CASES = [
      "it runs pair-all and pair-nearest."),
     ('set = "bi-poo-2001"', 'set = "bi-poo-2002"', "forecast[1].set = 'bi-poo-2002': no such "
      'parameter set; did you mean "bi-poo-2001"?'),
+    ('set = "bi-poo-2001"', 'set = "bi-poo-2001"\n[[forecast]]\nrule = "pair-all"\n'
+     'set = "bi-poo-2001"', "forecast[2]: pair-all with the set bi-poo-2001 stands twice; a "
+     "session keeps one forecast of each."),
     ('set = "bi-poo-2001"', "a_plus = 0.1", None),
 ]  # fmt: skip
 
