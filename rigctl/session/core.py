@@ -26,6 +26,8 @@ from rigctl.session.tally import Tally
 PHASE_LEAD_NS = 300_000_000
 # A pulse nearer than this is left alone by a pause: the boundary is the one after it.
 PAUSE_GUARD_NS = 250_000_000
+# The box's longest silence before its outputs go low, and what the clocks may differ by.
+BOX_ALONE_NS = 250_000_000 + 10_000_000
 # How often a phase that was ended early asks whether the last withdrawn pulse is settled.
 STOP_POLL_NS = 50_000_000
 # The arming outlives the plan by this much; pauses and gates use it up.
@@ -419,7 +421,10 @@ class SessionCore:
 
     def _close(self) -> None:
         """Write what is left and close: nothing more will be heard."""
-        self._rows += self._tally.finish(max(self._through_ns, self._now_ns))
+        now_ns = max(self._through_ns, self._now_ns)
+        # Cut off from us, the box goes on with its queue until it misses our frames.
+        alone_ns = BOX_ALONE_NS if self.ended == "link_lost" else 0
+        self._rows += self._tally.finish(now_ns, now_ns + alone_ns)
         self._move("record_complete")
         self._decide("closed")
         self._actions.append(act.Finish())

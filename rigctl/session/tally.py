@@ -231,17 +231,20 @@ class Tally:
             rows += self._forecast(through_ns)
         return rows
 
-    def finish(self, now_ns: int) -> list[Row]:
-        """Judge what has begun, write what never ran: nothing more will be heard."""
+    def finish(self, now_ns: int, may_fire_ns: int) -> list[Row]:
+        """Judge what has begun, write what never ran: nothing more will be heard.
+
+        A pulse planned up to ``may_fire_ns`` of which nothing was heard may have come; later ones
+        never left.
+        """
         rows: list[Row] = []
         if self._phase is not None:
             for pairing in self._phase.pairings:
-                if pairing.id not in self._judged and self._begun(pairing, now_ns):
+                if pairing.id not in self._judged and self._begun(pairing, may_fire_ns):
                     rows += self._judge(pairing)
         for delivery in self._ledger.deliveries():
             if delivery.fate is None:
-                # Nothing was heard of it: past its time nobody knows, before it it never left.
-                if delivery.planned_ns <= now_ns:
+                if delivery.planned_ns <= may_fire_ns:
                     rows += self._unknown(delivery)
                 else:
                     rows += self._ledger.resolved(delivery, "cancelled")
@@ -254,9 +257,9 @@ class Tally:
                     rows += _not_run(pairing, phase.index)
         return rows
 
-    def _begun(self, pairing: PlanPairing, now_ns: int) -> bool:
+    def _begun(self, pairing: PlanPairing, may_fire_ns: int) -> bool:
         return any(
-            d.fate not in (None, "cancelled") or (d.fate is None and d.planned_ns <= now_ns)
+            d.fate not in (None, "cancelled") or (d.fate is None and d.planned_ns <= may_fire_ns)
             for d in self._ledger.deliveries_of(pairing.id)
         )
 

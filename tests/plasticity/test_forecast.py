@@ -135,3 +135,16 @@ def test_every_set_names_source_preparation_conversion_and_runs(name: str) -> No
     made.pre(0.0)
     made.post(0.01)
     assert made.change > 0
+
+
+def test_a_shifted_event_may_still_come_before_one_already_told() -> None:
+    forecaster = Forecaster([CHOICE], ["s1"], {"s1": 5 * MS})
+    forecaster.pre("s1", 90 * MS)
+    forecaster.post(101 * MS)
+    forecaster.advance(102 * MS)
+    # In the variants that are early this one precedes the post spike; half the bound gives most.
+    forecaster.pre("s1", 103 * MS)
+    forecaster.finish()
+    (value,) = forecaster.read()
+    early = _direct(CHOICE, [87_500_000, 100_500_000], [101 * MS])
+    assert value.high == pytest.approx(early)

@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import sqlite3
+import threading
 from collections.abc import Sequence
 from contextlib import closing
 from pathlib import Path
@@ -91,3 +92,31 @@ def test_a_beginning_that_fails_leaves_nothing(
     with pytest.raises(InputError, match="cannot be made there: database or disk is full"):
         SqliteSink(tmp_path / "session.sqlite")
     assert list(tmp_path.iterdir()) == []
+
+
+class Gated(MemorySink):
+    """Stands in the middle of a write until it is let go."""
+
+    def __init__(self) -> None:
+        super().__init__()
+        self.entered, self.go = threading.Event(), threading.Event()
+
+    def write(self, rows: Sequence[Row]) -> None:
+        self.entered.set()
+        self.go.wait()
+        super().write(rows)
+
+
+def test_flush_waits_for_a_batch_that_is_being_written() -> None:
+    inner = Gated()
+    sink = ThreadedSink(inner)
+    sink.write([_pairing(1, "on_target")])
+    inner.entered.wait()
+    flushing = threading.Thread(target=sink.flush)
+    flushing.start()
+    flushing.join(0.05)
+    assert flushing.is_alive()
+    inner.go.set()
+    flushing.join()
+    assert len(inner.rows) == 1
+    sink.close(finished=True)

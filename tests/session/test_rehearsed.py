@@ -3,20 +3,28 @@
 from __future__ import annotations
 
 import itertools
+import sqlite3
+from contextlib import closing
 from pathlib import Path
 from typing import Any
 
 import msgspec
 import pytest
 
+from rigctl import backends
 from rigctl.backends.base import OpenOptions
 from rigctl.execute import execute
+from rigctl.link import messages as msg
+from rigctl.link.frames import FrameReader
 from rigctl.operator import StandIn
 from rigctl.plasticity import rule
 from rigctl.plasticity.sets import SETS
 from rigctl.record.read import Record, open_record
+from rigctl.record.sink import MemorySink
 from rigctl.record.verify import verify
 from rigctl.report.summary import summarise
+from rigctl.runtime import Runtime
+from rigctl.session.rows import EventRow
 from rigctl_sim.knobs import SimKnobs
 from rigctl_sim.world import World
 from tests.conftest import RIG_TEXT, SHORT, prepared, rehearsed
@@ -294,3 +302,92 @@ def test_what_the_box_still_tells_after_the_disarming_is_in_the_record(tmp_path:
         # Pulses that waited in the box's queue come back as cancelled, none of them as unknown.
         fates = {t.fate for t in record.triggers}
         assert fates == {"fired", "cancelled"}
+
+
+BURSTS = SHORT.replace(
+    "pairings = 12\nrate_hz = 1",
+    "pairings = 4\nevery_s = 4\npost_count = 3\npost_rate_hz = 80\n"
+    "repeat = [{ times = 5, rate_hz = 2 }]",
+).replace(
+    '[[phase.block]]\nkind = "pairings"',
+    '[[phase.test]]\npathway = "s2"\nevery_s = 0.7\nfirst_at_s = 0.25\nstep = false\n\n'
+    '[[phase.block]]\nkind = "pairings"',
+)
+
+
+def test_tests_within_a_long_pairing_take_none_of_its_spikes(tmp_path: Path) -> None:
+    # Spikes 12.5 ms apart lie within each other's 15 ms window; each pulse's ends at the next.
+    assert BURSTS.count("repeat") == BURSTS.count("0.7") == 1
+    ended = rehearsed(tmp_path, BURSTS)
+    with open_record(ended.record) as record:
+        assert [p.fate for p in record.pairings] == ["on_target"] * 4
+        assert len(record.spike_pairs) == 4 * 15
+        posts = [s for s in record.spikes if s.side == "post"]
+        assert len(posts) == 4 * 15
+        assert all(s.pairing is not None for s in posts)
+    assert verify(ended.record).ok
+
+
+@pytest.mark.parametrize("after_ms", [0.2, 0.8, 1.4, 2.0])
+def test_an_end_while_the_box_is_being_asked_hears_it_out_all_the_same(
+    after_ms: float, short_record: Path, tmp_path: Path
+) -> None:
+    with closing(sqlite3.connect(short_record)) as db:
+        asked = db.execute("SELECT at_ns FROM event WHERE kind = 'woke'").fetchall()
+    at_ns = next(t for (t,) in asked if t > 38 * S) + round(after_ms * 1e6)
+    ended = rehearsed(tmp_path, commands=[(at_ns, "abandon", "")])
+    with open_record(ended.record) as record:
+        assert {t.fate for t in record.triggers} == {"fired", "cancelled"}
+        told = [e.kind for e in record.events]
+        assert told.index("box_disarmed") < told.index("closed")
+
+
+def test_pulses_of_which_nobody_knows_widen_the_band(short_record: Path, tmp_path: Path) -> None:
+    with open_record(short_record) as record:
+        fired = next(t for t in record.triggers if t.pairing == 5 and t.line == "pre1").fired_ns
+    assert fired is not None
+    # The box was on 3 s before and runs 23 ppm fast; its word for a pulse takes 0.2 ms and more.
+    at_s = (fired - 3 * S) / 1e9 / 1.000023 + 0.0001
+    ended = rehearsed(tmp_path, faults=f"cable_pull_at_s={at_s:.6f}")
+    with open_record(ended.record) as record:
+        unknown = [t for t in record.triggers if t.pairing == 5]
+        assert {t.fate for t in unknown} <= {"unknown", "cancelled"}
+        assert unknown[0].fate == "unknown"
+        assert record.pairings[4].fate == "unknown"
+        before, last = [f for f in record.forecasts if f.pathway == "s1"][-2:]
+        assert last.change == pytest.approx(before.change, rel=1e-3)
+        assert last.high - last.low > before.high - before.low
+    assert verify(ended.record).ok
+
+
+class Watched(MemorySink):
+    """Notes what had been sent when the record was last made durable."""
+
+    def __init__(self) -> None:
+        super().__init__()
+        self.log: list[str] = []
+
+    def flush(self) -> None:
+        kinds = [r.kind for r in self.rows if isinstance(r, EventRow)]
+        self.log.append("durable: " + ",".join(kinds))
+
+
+def test_the_record_is_durable_before_the_box_is_armed(tmp_path: Path) -> None:
+    ready = prepared(tmp_path)
+    connection = backends.load("sim").open(ready.rig, ready.plan, OpenOptions(1))
+    sink = Watched()
+    reader = FrameReader()
+    write = connection.link.write
+
+    def noted(data: bytes) -> None:
+        for payload in reader.feed(data):
+            sink.log.append(type(msg.decode(payload)).__name__)
+        write(data)
+
+    connection.link.write = noted  # type: ignore[method-assign]
+    header = {"record_version": "1"}
+    Runtime(ready.plan, header, connection, sink, StandIn()).run()
+    arming = sink.log.index("ArmRequest")
+    durable = [e for e in sink.log[:arming] if e.startswith("durable")]
+    assert durable
+    assert "connected" in durable[-1]
