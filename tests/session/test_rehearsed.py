@@ -306,7 +306,7 @@ def test_what_the_box_still_tells_after_the_disarming_is_in_the_record(tmp_path:
 
 BURSTS = SHORT.replace(
     "pairings = 12\nrate_hz = 1",
-    "pairings = 4\nevery_s = 4\npost_count = 3\npost_rate_hz = 80\n"
+    "pairings = 4\nevery_s = 4\npost_count = 3\npost_rate_hz = 100\n"
     "repeat = [{ times = 5, rate_hz = 2 }]",
 ).replace(
     '[[phase.block]]\nkind = "pairings"',
@@ -316,7 +316,7 @@ BURSTS = SHORT.replace(
 
 
 def test_tests_within_a_long_pairing_take_none_of_its_spikes(tmp_path: Path) -> None:
-    # Spikes 12.5 ms apart lie within each other's 15 ms window; each pulse's ends at the next.
+    # Spikes 10 ms apart lie within each other's 15 ms window; each pulse's ends at the next.
     assert BURSTS.count("repeat") == BURSTS.count("0.7") == 1
     ended = rehearsed(tmp_path, BURSTS)
     with open_record(ended.record) as record:
