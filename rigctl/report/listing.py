@@ -49,15 +49,18 @@ def as_table(found: list[dict[str, Any]], folder: Path) -> Table | str:
 
     if not found:
         return f"no records below {folder}"
-    table = Table("record", "started (UTC)", "protocol", "ended", "on target", "stamp")
+    table = Table(box=None, pad_edge=False, padding=(0, 2, 0, 0))
+    for column in ("record", "started (UTC)", "protocol", "ended", "on target", "stamp"):
+        table.add_column(column, overflow="fold", no_wrap=column in ("ended", "stamp"))
     for entry in found:
+        record = str(Path(entry["record"]).relative_to(folder))
         if "problem" in entry:
-            table.add_row(entry["record"], "", "", entry["problem"], "", "")
+            table.add_row(record, "", "", entry["problem"], "", "")
             continue
         pairings = entry["pairings"]
         table.add_row(
-            entry["record"],
-            entry["started_utc"],
+            record,
+            entry["started_utc"].replace("T", " ").removesuffix("Z"),
             entry["protocol"],
             entry["ended"] if entry["closed"] else "open",
             f"{pairings['on_target']} of {pairings['planned']}",

@@ -4,9 +4,10 @@ from __future__ import annotations
 
 import math
 from collections import Counter
+from statistics import fmean, stdev
 from typing import TYPE_CHECKING, Any
 
-from rigctl.plasticity.forecast import as_planned
+from rigctl.plasticity.forecast import as_planned, extrapolates
 from rigctl.protocol.plan import Plan
 from rigctl.protocol.planned import paired_pathways, planned_spikes
 from rigctl.record.read import Record
@@ -17,6 +18,8 @@ from rigctl.session.rows import PAIR_FATES
 if TYPE_CHECKING:
     from rich.console import RenderableType
 
+# Fates of pairings that had both spikes.
+_DELIVERED = ("on_target", "off_target", "doublet")
 # The maximum of n events bounds a percentile with 95 % confidence from this n on
 # (order statistics: 1 − p^n ≥ .95).
 _LEAST_N = {"p50": 6, "p99": 299, "p999": 2995}
@@ -42,9 +45,11 @@ def summarise(record: Record, plan: Plan | None = None) -> dict[str, Any]:
         "timed_by": record.header.get("timed_by", "box"),
         "pairings": pairing_counts(record, plan),
         "dt_ms": dt_statistics(record),
+        "dt_error_ms": dt_error_statistics(record),
         "lateness_us": lateness_us(record),
         "forecast": delivered_forecast(record, plan),
         "forecast_as_planned": planned_forecast(plan),
+        "forecast_notes": forecast_notes(record, plan),
         "alarms": [f"{a['name']}: {a['text']}" for a in record.bodies("alarm")],
     }
 
@@ -65,7 +70,7 @@ def pairing_counts(record: Record, plan: Plan) -> dict[str, int]:
     judged: dict[str, int] = {fate: fates.get(fate, 0) for fate in PAIR_FATES}
     return {
         "planned": planned,
-        "delivered": sum(judged[f] for f in ("on_target", "off_target", "doublet")),
+        "delivered": sum(judged[f] for f in _DELIVERED),
         **judged,
         "replacements": sum(1 for p in record.pairings if p.replaces is not None),
     }
@@ -85,6 +90,17 @@ def dt_statistics(record: Record) -> dict[str, float | None]:
     mean = sum(dts) / len(dts)
     sd = math.sqrt(sum((d - mean) ** 2 for d in dts) / (len(dts) - 1)) if len(dts) > 1 else None
     return {"target": target, "mean": mean, "sd": sd, "min": min(dts), "max": max(dts)}
+
+
+def dt_error_statistics(record: Record) -> dict[str, float | int | None]:
+    """Return delivered minus target Δt of single spikes, ms: also where targets differ."""
+    errors = [
+        (p.delivered_dt_ns - p.target_dt_ns) / 1e6
+        for p in record.spike_pairs
+        if p.fate in ("on_target", "off_target") and p.delivered_dt_ns is not None
+    ]
+    mean = fmean(errors) if errors else None
+    return {"n": len(errors), "mean": mean, "sd": stdev(errors) if len(errors) > 1 else None}
 
 
 def lateness_ns(record: Record) -> list[int]:
@@ -108,6 +124,20 @@ def lateness_us(record: Record) -> dict[str, float | None]:
         found[name] = late[max(0, math.ceil(p * len(late)) - 1)] / 1000 if enough else None
     found["max"] = late[-1] / 1000 if late else None
     return found
+
+
+def forecast_notes(record: Record, plan: Plan) -> list[str]:
+    """Return what must be said beside each forecast: where it applies, and extrapolation."""
+    delivered = sum(1 for p in record.pairings if p.fate in _DELIVERED)
+    notes = []
+    for choice in plan.forecasts:
+        applies = choice.preparation or "NO PREPARATION NAMED"
+        beyond = extrapolates(choice, delivered)
+        notes.append(
+            f"{label(plan, choice.rule, choice.parameter_set)}: {choice.parameter_set}, {applies}"
+            + (f"; EXTRAPOLATED: {beyond}" if beyond else "")
+        )
+    return notes
 
 
 def delivered_forecast(record: Record, plan: Plan) -> dict[str, dict[str, float]]:
@@ -169,6 +199,10 @@ def as_text(summary: dict[str, Any]) -> RenderableType:
             f"{dt['mean']:+.2f}{spread} ms (target {dt['target']:+g}), "
             f"{dt['min']:+.2f} to {dt['max']:+.2f}",
         )
+    elif summary["dt_error_ms"]["mean"] is not None:
+        error = summary["dt_error_ms"]
+        spread = "" if error["sd"] is None else f" ± {error['sd']:.2f}"
+        table.add_row("Δt error", f"{error['mean']:+.2f}{spread} ms over {error['n']} spike pairs")
     for rule, value in summary["forecast"].items():
         planned = summary["forecast_as_planned"].get(rule)
         exactly = f"; planned exactly {planned['change_pct']:+.1f} %" if planned else ""
@@ -177,6 +211,8 @@ def as_text(summary: dict[str, Any]) -> RenderableType:
             f"{value['change_pct']:+.1f} % [{value['low_pct']:+.1f}, {value['high_pct']:+.1f}]"
             f"{exactly}",
         )
+    for note in summary["forecast_notes"]:
+        table.add_row("applies to", note)
     for alarm in summary["alarms"]:
         table.add_row("alarm", alarm)
     table.add_row("record", summary["record"])

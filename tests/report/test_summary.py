@@ -23,6 +23,8 @@ KEYS = {
     "timed_by",
     "pairings",
     "dt_ms",
+    "dt_error_ms",
+    "forecast_notes",
     "lateness_us",
     "forecast",
     "forecast_as_planned",
