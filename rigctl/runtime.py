@@ -24,7 +24,7 @@ from rigctl.timing.sync import ClockSync
 
 # The box allows 250 ms of silence: one frame may be lost and the next still comes in time.
 KEEP_ALIVE_NS = 100_000_000
-SYNC_EVERY_NS = 2_000_000_000
+SYNC_EVERY_NS = 4_000_000_000
 UPLOAD_HORIZON_NS = 2_000_000_000
 UPLOAD_GUARD_NS = 15_000_000
 PROGRESS_EVERY_NS = 1_000_000_000
