@@ -14,6 +14,7 @@ import numpy.typing as npt
 from msgspec import Struct
 
 from rigctl.plasticity import rule
+from rigctl.protocol.audit_pairs import reach_of
 from rigctl.protocol.plan import RuleChoice
 from rigctl.protocol.planned import PlannedSpike
 
@@ -48,7 +49,7 @@ def sensitivity(choice: RuleChoice, spikes: list[PlannedSpike], pathway: str) ->
     pre_all = np.array(
         [s.at_ns for s in spikes if s.side == "pre" and s.pathway == pathway], dtype=np.float64
     )
-    pre = _near(pre_all, post)
+    pre = _near(pre_all, post, max(_NEAR_NS, 2 * reach_of((choice,))))
     cut_to = None
     if len(pre) + len(post) > _MOST_SPIKES:
         cut_to = _MOST_SPIKES
@@ -56,7 +57,8 @@ def sensitivity(choice: RuleChoice, spikes: list[PlannedSpike], pathway: str) ->
         pre, post = pre[pre < end], post[post < end]
 
     def change(shift_ns: Floats | float, keep: npt.NDArray[np.bool_] | None = None) -> float:
-        return _run(choice, pre, post + shift_ns, keep)
+        told = post + shift_ns
+        return change_of(choice, pre, told if keep is None else told[keep])
 
     base = change(0.0)
     if base == 0 or not len(post):
@@ -85,22 +87,26 @@ def sensitivity(choice: RuleChoice, spikes: list[PlannedSpike], pathway: str) ->
     )
 
 
-def _near(pre: Floats, post: Floats) -> Floats:
-    """Keep the pre events that any post spike is near to."""
+def _near(pre: Floats, post: Floats, near_ns: int) -> Floats:
+    """Keep the pre events that any post spike is near to: the others change nothing."""
     times = post.tolist()
 
     def near(at_ns: float) -> bool:
-        n = bisect_left(times, at_ns - _NEAR_NS)
-        return n < len(times) and times[n] <= at_ns + _NEAR_NS
+        n = bisect_left(times, at_ns - near_ns)
+        return n < len(times) and times[n] <= at_ns + near_ns
 
     return pre[[near(t) for t in pre.tolist()]] if len(pre) else pre
 
 
-def _run(
-    choice: RuleChoice, pre: Floats, post: Floats, keep: npt.NDArray[np.bool_] | None
-) -> float:
-    if keep is not None:
-        post = post[keep]
+def change_of(choice: RuleChoice, pre: Floats, post: Floats) -> float:
+    """Return what a rule makes of one pathway's pre events and the cell's post spikes.
+
+    Parameters
+    ----------
+    choice : RuleChoice
+    pre, post : ndarray of float, shape (n,) and (m,)
+        ns, in any order.
+    """
     made = rule(choice.rule, **choice.parameters)
     times = np.concatenate([pre, post])
     is_post = np.arange(len(times)) >= len(pre)

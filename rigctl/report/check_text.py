@@ -5,104 +5,24 @@ from __future__ import annotations
 from typing import TYPE_CHECKING, Any
 
 import msgspec
-from rich.console import Console, ConsoleOptions, Group, RenderableType, RenderResult
+from rich.console import Group, RenderableType
+from rich.padding import Padding
 from rich.table import Table
 from rich.text import Text
 
 from rigctl.protocol.audit import Audit, ForecastAudit
 from rigctl.protocol.plan import Plan
+from rigctl.report.check_drawing import OnePairing, Portable, Timeline
 from rigctl.safety.limits import PASSING_IS_NO_PERMISSION, Verdict
+from rigctl.safety.verdict import shown
 
 if TYPE_CHECKING:
     from rigctl.execute import Prepared
 
 _MOST_ROWS = 8
-
-
-class Timeline:
-    """The phases to scale, as wide as the terminal: one row for each line that pulses."""
-
-    def __init__(self, plan: Plan) -> None:
-        self._plan = plan
-
-    def __rich_console__(self, console: Console, options: ConsoleOptions) -> RenderResult:
-        plain = options.ascii_only or options.encoding.lower() not in ("utf-8", "utf8")
-        marks = " .:#" if plain else " ·▪█"
-        names = [line.name for line in self._plan.lines]
-        margin = max([len(n) for n in names] + [5]) + 2
-        width = max(20, options.max_width - margin - 1)
-        total_ns = max(1, self._plan.duration_ns)
-        yield self._heads(margin, width, total_ns, "|" if plain else "│")
-        for name in names:
-            bins = [0] * width
-            start_ns = 0
-            for phase in self._plan.phases:
-                for trigger in phase.triggers:
-                    if trigger.line == name:
-                        at = (start_ns + trigger.at_ns) * width // total_ns
-                        bins[min(at, width - 1)] += 1
-                start_ns += phase.duration_ns
-            most = max(bins)
-            cells = "".join(
-                marks[0 if n == 0 else 1 if n * 3 <= most else 2 if n * 3 <= 2 * most else 3]
-                for n in bins
-            )
-            yield Text(f"{name:<{margin}}{cells}", no_wrap=True, overflow="crop")
-        yield Text(_axis(margin, width, total_ns / 6e10), no_wrap=True, overflow="crop")
-
-    def _heads(self, margin: int, width: int, total_ns: int, bar: str) -> Text:
-        cells = [" "] * width
-        start_ns = 0
-        for phase in self._plan.phases:
-            first = start_ns * width // total_ns
-            start_ns += phase.duration_ns
-            room = max(1, start_ns * width // total_ns - first - 1)
-            for n, letter in enumerate((bar + phase.name)[: room + 1]):
-                if first + n < width:
-                    cells[first + n] = letter
-        return Text(" " * margin + "".join(cells), no_wrap=True, overflow="crop")
-
-
-def _axis(margin: int, width: int, minutes: float) -> str:
-    step = next((s for s in (1, 2, 5, 10, 20, 60, 120, 240) if minutes / s <= 12), 480)
-    cells = [" "] * (width + 8)
-    for minute in range(0, int(minutes) + 1, step):
-        at = int(minute / max(minutes, 1e-9) * width)
-        for n, letter in enumerate(str(minute)):
-            if at + n < len(cells):
-                cells[at + n] = letter
-    return f"{'min':<{margin}}" + "".join(cells).rstrip()
-
-
-class OnePairing:
-    """One pairing at the synapse, to scale."""
-
-    def __init__(self, plan: Plan) -> None:
-        self._plan = plan
-
-    def __rich_console__(self, console: Console, options: ConsoleOptions) -> RenderResult:
-        plain = options.ascii_only or options.encoding.lower() not in ("utf-8", "utf8")
-        found = next(((ph, p) for ph in self._plan.phases for p in ph.pairings), None)
-        if found is None:
-            return
-        phase, pairing = found
-        lines = {line.name: line for line in self._plan.lines}
-        events: dict[str, list[float]] = {"pre": [], "post": []}
-        for trigger in phase.triggers:
-            line = lines[trigger.line]
-            if trigger.pairing == pairing.id and line.drives != "step":
-                events[line.drives].append((trigger.at_ns + line.latency_ns) / 1e6)
-        times = events["pre"] + events["post"]
-        zero, span = min(times), max(max(times) - min(times), 1e-9)
-        width = max(20, min(options.max_width - 30, 90))
-        mark, rest = ("|", "-") if plain else ("┃", "─")
-        yield Text(f"first pairing ({self._plan.pre_reference}, {self._plan.post_reference}), ms:")
-        for side, ats in events.items():
-            cells = [rest] * width
-            for at in ats:
-                cells[int((at - zero) / span * (width - 1))] = mark
-            shown = ", ".join(f"{at - zero:g}" for at in ats[:6]) + (" …" if len(ats) > 6 else "")
-            yield Text(f"  {side:<5}{''.join(cells)}  {shown or 'none'}", no_wrap=True)
+_MOST_STRETCHES = 12
+# So many columns of the washout budget stand in one row.
+_MINUTES_A_ROW = 20
 
 
 def render(plan: Plan, found: Audit, verdicts: list[Verdict]) -> RenderableType:
@@ -116,7 +36,7 @@ def render(plan: Plan, found: Audit, verdicts: list[Verdict]) -> RenderableType:
         "",
         _phases(found),
         "",
-        _counts(found),
+        _counts(plan, found),
         "",
         _pairs(found),
         "",
@@ -129,7 +49,7 @@ def render(plan: Plan, found: Audit, verdicts: list[Verdict]) -> RenderableType:
     ]
     if found.not_stated:
         parts += [_not_stated(found), ""]
-    return Group(*parts, Text(f"plan hash  {plan.hash()}"))
+    return Portable(Group(*parts, Text(f"plan hash  {plan.hash()}")))
 
 
 def _table(title: str, *columns: str) -> Table:
@@ -147,18 +67,35 @@ def _phases(found: Audit) -> Table:
             s.name, s.gate, f"{s.start_ns / 6e10:.2f} min", f"{s.end_ns / 6e10:.2f} min",
             str(s.pairings), str(s.tests),
         )  # fmt: skip
+        inside = [x for x in found.stretches if x.phase == s.name] if s.pairings else []
+        # One block alone is the phase over again.
+        for x in inside[:_MOST_STRETCHES] if len(inside) > 1 else []:
+            dt = "" if x.dt_ms is None else f" at {x.dt_ms:+g} ms"
+            count = ("", str(x.count)) if x.what == "tests" else (str(x.count), "")
+            table.add_row(
+                f"  {x.what}, {x.pathway}{dt}", "", f"{x.start_ns / 6e10:.2f} min",
+                f"{x.end_ns / 6e10:.2f} min", *count,
+            )  # fmt: skip
+        if len(inside) > _MOST_STRETCHES:
+            table.add_row(f"  … {len(inside) - _MOST_STRETCHES} more", "", "", "", "", "")
+        if s.unpaired:
+            table.add_row(f"  {s.unpaired} pre events outside pairings", "", "", "", "", "")
     table.add_row("finished after", "", "", f"{found.duration_ns / 6e10:.2f} min", "", "")
     return table
 
 
-def _counts(found: Audit) -> Table:
+def _counts(plan: Plan, found: Audit) -> Table:
     phases = list(dict.fromkeys(c.phase for c in found.counts))
+    ruled = {(p.name, p.rule.line) for p in plan.phases if p.rule is not None}
     table = _table("Pulses", "line", "pathway", *phases, "in all")
     for line in sorted({c.line for c in found.counts}):
         mine = {c.phase: c for c in found.counts if c.line == line}
         pathway = next(iter(mine.values())).pathway or ""
         numbers = [mine[p].pulses if p in mine else 0 for p in phases]
-        table.add_row(line, pathway, *map(str, numbers), str(sum(numbers)))
+        # A box rule gives as many pulses as there are spikes to start them, up to its count.
+        most = [(p, line) in ruled for p in phases]
+        cells = [f"{'up to ' if limit else ''}{n}" for limit, n in zip(most, numbers, strict=True)]
+        table.add_row(line, pathway, *cells, f"{'up to ' if any(most) else ''}{sum(numbers)}")
     return table
 
 
@@ -174,7 +111,9 @@ def _pairs(found: Audit) -> Table:
         table.add_row("", "0", f"unintended within {found.reach_ms:g} ms")
     for pair in found.unintended[:_MOST_ROWS]:
         table.add_row(
-            f"{pair.dt_ms:+g} ms", str(pair.count), f"UNINTENDED: {pair.what}, {pair.phase}"
+            f"{pair.dt_ms:+g} ms",
+            str(pair.count),
+            f"UNINTENDED: {pair.what}, {pair.phase}",
         )
     shown = sum(p.count for p in found.unintended[:_MOST_ROWS])
     if found.unintended_total > shown:
@@ -202,17 +141,24 @@ def _forecasts(found: Audit) -> Group:
             )
         )
         lines.append(
-            f"    intended pairs alone {percent(f.intended_only)}, other pairs add "
-            f"{percent(f.change - f.intended_only)}, test stimuli "
-            f"{percent(f.change - f.without_tests)}"
+            _indented(
+                f"intended pairs alone {percent(f.intended_only)}, other pairs add "
+                f"{percent(f.change - f.intended_only)}, test stimuli "
+                f"{percent(f.change - f.without_tests)}"
+            )
         )
         if f.sensitivity is not None:
-            lines.append(f"    moved by a tenth: {sensitivity_words(f)}")
+            lines.append(_indented(f"moved by a tenth: {sensitivity_words(f)}"))
         if f.extrapolation:
-            lines.append(f"    EXTRAPOLATION: {f.extrapolation}")
-    if len(lines) == 1:
-        lines.append("    none: no pairing, or nothing within the rules' reach")
+            lines.append(_indented(f"EXTRAPOLATION: {f.extrapolation}"))
+    if len(lines) == 1 and not found.notes:
+        lines.append(_indented("none: no pairing, or nothing within the rules' reach"))
+    lines += [_indented(note) for note in found.notes]
     return Group(*lines)
+
+
+def _indented(text: str) -> Padding:
+    return Padding(Text(text), (0, 0, 0, 4))
 
 
 def sensitivity_words(f: ForecastAudit) -> str:
@@ -243,49 +189,88 @@ def _washout(plan: Plan, found: Audit) -> list[RenderableType]:
         for word, limit in (("start", start_by), ("end", end_by))
         if limit is not None
     )
-    legend: dict[str, str] = {}
+    letters = _letters([phase.name for phase in plan.phases])
+    inductions = {phase.name for phase in plan.phases if phase.kind == "induction"}
     cells = []
     for minute in found.washout:
-        name = minute.what.split(" → ")[0]
-        letter = legend.setdefault(name, name[0] if name != "before the plan" else ".")
-        cells.append(letter.upper() if minute.flag == "late" else "!" if minute.flag else letter)
-    numbers = "".join(f"{m.minute:>3}" for m in found.washout)
-    keys = ", ".join(f"{letter} {name}" for name, letter in legend.items())
-    late = [m.minute for m in found.washout if m.flag]
-    flags = f"; from minute {late[0]} on late (capital)" if late else ""
+        names = minute.what.split(" → ")
+        name = next((n for n in names if n in inductions), names[0])
+        letter = letters.get(name, ".")
+        # Over is told from late by a sign, not by colour.
+        cells.append({"late": letter.upper(), "over": "!"}.get(minute.flag, letter))
+    rows: list[RenderableType] = []
+    for n in range(0, len(cells), _MINUTES_A_ROW):
+        part = slice(n, n + _MINUTES_A_ROW)
+        rows.append(Text("minute " + "".join(f"{m.minute:>3}" for m in found.washout[part])))
+        rows.append(Text("       " + "".join(f"{c:>3}" for c in cells[part])))
+    drawn = {c.lower() for c in cells}
+    keys = [f"{letter} {name}" for name, letter in letters.items() if letter in drawn]
+    flags = {m.flag for m in found.washout}
+    warn_at = clock.get("warn_at_ns")
+    if "late" in flags and warn_at is not None:
+        keys.append(f"CAPITAL: late, past minute {warn_at / 6e10:g}")
+    if "over" in flags:
+        keys.append("!: past the end")
     return [
         "",
-        f"Washout clock: an induction must {allowed} after break-in",
-        Text(f"minute {numbers}", overflow="fold"),
-        Text("       " + "".join(f"{c:>3}" for c in cells), overflow="fold"),
-        f"       {keys}{flags}",
+        Text(f"Washout clock: an induction must {allowed} after break-in"),
+        *rows,
+        Text(f"       . before the plan, {', '.join(keys)}"),
     ]
 
 
+def _letters(names: list[str]) -> dict[str, str]:
+    """Return a small letter or a digit for each phase, its own first letter where that is free."""
+    free = "abcdefghijklmnopqrstuvwxyz0123456789"
+    letters: dict[str, str] = {}
+    for name in names:
+        wanted = [*name.lower(), *free]
+        letters[name] = next((c for c in wanted if c in free and c not in letters.values()), "*")
+    return letters
+
+
 def _limits(verdicts: list[Verdict]) -> Group:
-    """What is over or open first; then a line for each check, with sources as numbered notes."""
-    sources: dict[str, int] = {}
+    """A line for each check, over and open ones first; note, formula and source stand below."""
+    numbers: dict[str, int] = {}
     table = Table(box=None, pad_edge=False, padding=(0, 2, 0, 0), show_header=True)
-    for column in ("", "line", "check", "value", "limit", "formula, note"):
-        table.add_column(column, overflow="fold", no_wrap=column not in ("", "formula, note"))
+    for column in ("", "line", "check", "value", "limit", "note"):
+        table.add_column(column, overflow="fold", no_wrap=column not in ("", "note"))
     for v in sorted(verdicts, key=lambda v: {False: 0, None: 1, True: 2}[v.ok]):
-        number = sources.setdefault(v.source, len(sources) + 1)
-        mark = {True: "ok", False: "OVER", None: "not stated"}[v.ok]
-        value = "" if v.value is None else f"{_short(v.value)} {v.unit}"
-        limit = "" if v.limit is None else f"{_short(v.limit)} {v.unit}"
-        note = "; ".join(part for part in (v.formula, v.note) if part)
-        table.add_row(mark, v.line, v.name, value, limit, f"{note} \\[{number}]")
-    notes = [Text(f"  [{n}] {source}", style="dim") for source, n in sources.items()]
-    return Group("Limits", table, *notes)
+        text = "; ".join(part for part in (v.note, v.formula, v.source) if part)
+        number = numbers.setdefault(text, len(numbers) + 1)
+        # A limit of spacing is a least one; every other is a most.
+        sign = "" if v.limit is None else "≥ " if v.name == "spacing" else "≤ "
+        table.add_row(
+            verdict_mark(v), v.line, v.name,
+            "" if v.value is None else shown(v.value, v.unit),
+            "" if v.limit is None else sign + shown(v.limit, v.unit),
+            Text(f"[{number}]"),
+        )  # fmt: skip
+    counts = [sum(1 for v in verdicts if v.ok is ok) for ok in (False, None)]
+    head = f"Limits: {len(verdicts)} checks, {counts[0]} over, {counts[1]} not stated"
+    return Group(head, table, _hanging({f"[{n}]": text for text, n in numbers.items()}))
 
 
-def _short(value: float) -> str:
-    """Return a number without exponent where a person would write it so."""
-    return f"{value:.4g}" if abs(value) < 1e4 else f"{value:,.0f}"
+def _hanging(items: dict[str, str]) -> Table:
+    """Return items whose second lines stand under their first."""
+    table = Table.grid(padding=(0, 1, 0, 0))
+    for mark, text in items.items():
+        table.add_row(Text(f"  {mark}"), Text(text))
+    return table
+
+
+def verdict_mark(verdict: Verdict) -> str:
+    """Return how a check went, in a word."""
+    if verdict.ok and verdict.note.startswith("for information"):
+        return "info"
+    return {True: "ok", False: "OVER", None: "not stated"}[verdict.ok]
 
 
 def _not_stated(found: Audit) -> Group:
-    return Group("Not stated:", *[f"  - {what}" for what in found.not_stated])
+    table = Table.grid(padding=(0, 1, 0, 0))
+    for what in found.not_stated:
+        table.add_row("  -", Text(what))
+    return Group("Not stated:", table)
 
 
 def as_json(plan: Plan, found: Audit, verdicts: list[Verdict]) -> dict[str, Any]:
@@ -306,7 +291,7 @@ def render_arms(arms: list[Prepared]) -> RenderableType:
     for arm in arms:
         data = arm_json(arm)
         table.add_row(str(data["arm"]), f"{data['dt_ms']:+g} ms", data["plan_hash"][:16] + "…")
-    return Group("", table)
+    return Portable(Group("", table))
 
 
 def arm_json(arm: Prepared) -> dict[str, Any]:

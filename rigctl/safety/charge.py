@@ -15,7 +15,7 @@ MICRO = (
     "Cogan et al. 2016, J Neural Eng 13:021001, read in the paper: 2 nC safe, 4 nC damaged "
     "(200 µs, 50 Hz, 2000 µm²); McCreery et al. 2010, J Neural Eng 7:036005, read second-hand"
 )
-_COGAN = "Cogan 2008, Annu Rev Biomed Eng 10:275, read second-hand"
+COGAN = "Cogan 2008, Annu Rev Biomed Eng 10:275, read second-hand"
 MICRO_AREA_UM2 = 2000.0
 HEAT_C_PER_MW = 0.25
 
@@ -60,7 +60,7 @@ def largest_current_ua(k: float, area: float, width_us: float) -> float:
 
 
 def density_limit(material: str) -> tuple[float | None, str]:
-    """Return the published charge injection limit of a material (µC/cm²) and its source."""
+    """Return the published limit of a material (µC/cm² per phase), if any, and its source."""
     if material in _DENSITY_UC_CM2:
-        return _DENSITY_UC_CM2[material], f"{material}: {_COGAN}"
-    return None, "not stated"
+        return _DENSITY_UC_CM2[material], f"{material}: {COGAN}"
+    return None, f"no published limit here for {material}"
