@@ -10,7 +10,7 @@ from rigctl.protocol.audit import Audit, audit
 from rigctl.protocol.plan import RuleChoice
 from rigctl.protocol.rig import Rig
 from rigctl.report import words
-from rigctl.report.check_text import sensitivity_words
+from rigctl.report.check_text import sensitivity_words, verdict_mark
 from rigctl.report.facts import Facts
 from rigctl.report.html import bullets, folded, paragraph, table
 from rigctl.report.log import log_rows
@@ -244,7 +244,7 @@ def limits_of_plan(facts: Facts, rig: Rig) -> str:
     verdicts = limits.verdicts(facts.plan, rig)
     rows = [
         (
-            {True: "ok", False: "OVER", None: "not stated"}[v.ok],
+            verdict_mark(v),
             v.line,
             v.name,
             "" if v.value is None else f"{v.value:.4g} {v.unit}",
