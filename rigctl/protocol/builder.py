@@ -10,7 +10,7 @@ from rigctl.errors import InputError
 from rigctl.protocol.plan import PlanLine, PlanPairing, PlanSpikePair, PlanTrigger
 
 
-class _Raw(Struct):
+class _Raw(Struct, gc=False):
     at_ns: int
     line: PlanLine
     pairing: int | None
@@ -18,13 +18,22 @@ class _Raw(Struct):
     id: int = 0
 
 
-class _RawPairing(Struct):
+class Pulses(Struct, frozen=True):
+    """The pulses of a pairing, ns from its zero.
+
+    ``pairs`` holds (pulse of the pre event, pulse of the post event, target Δt in ns).
+    """
+
+    at: tuple[tuple[PlanLine, int], ...]
+    pairs: tuple[tuple[int, int, int], ...]
+
+
+class _RawPairing(Struct, gc=False):
     pathway: str
     block: int
     path: str
-    pres: list[_Raw]
-    posts: list[_Raw]
-    pairs: list[tuple[int, int, int]]
+    raws: list[_Raw]
+    pulses: Pulses
     may_interleave: bool
     first_ns: int
     last_ns: int
@@ -33,14 +42,17 @@ class _RawPairing(Struct):
 class PhaseBuilder:
     """Takes triggers and pairings in any order; :meth:`finish` sorts, numbers and checks them."""
 
-    def __init__(self, tick_ns: int, min_spacing_ns: int, window_ns: int, where: str) -> None:
+    def __init__(self, tick_ns: int, min_spacing_ns: int, clear_ns: int, where: str) -> None:
         self._tick_ns = tick_ns
         self._min_spacing_ns = min_spacing_ns
-        self._window_ns = window_ns
+        # A test step keeps this far from the stimulus before it.
+        self._clear_ns = clear_ns
         self._where = where
         self._triggers: list[_Raw] = []
         self._pairings: list[_RawPairing] = []
+        # The last trigger's edge, and when the last pulse is over.
         self.last_ns = 0
+        self.free_ns = 0
 
     def _grid(self, at_ns: int) -> int:
         """Round half to even to the box's tick grid."""
@@ -53,7 +65,10 @@ class PhaseBuilder:
         """Add one pulse."""
         raw = _Raw(self._grid(at_ns), line, pairing, path)
         self._triggers.append(raw)
-        self.last_ns = max(self.last_ns, raw.at_ns)
+        if raw.at_ns > self.last_ns:
+            self.last_ns = raw.at_ns
+        if raw.at_ns + line.width_ns > self.free_ns:
+            self.free_ns = raw.at_ns + line.width_ns
         return raw
 
     def pairing(
@@ -61,33 +76,23 @@ class PhaseBuilder:
         pathway: str,
         block: int,
         path: str,
-        pres: list[tuple[PlanLine, int]],
-        posts: list[tuple[PlanLine, int]],
-        pairs: list[tuple[int, int, int]],
+        zero_ns: int,
+        pulses: Pulses,
         step: PlanLine | None,
         step_after_ns: int,
         may_interleave: bool = False,
     ) -> None:
-        """Add one pairing: its pulses, and (pre, post, target Δt) for each spike pair."""
+        """Add one pairing with its pulses; many may share one ``pulses``."""
         number = len(self._pairings)
-        raw_pres = [self.trigger(line, at_ns, number, path) for line, at_ns in pres]
-        raw_posts = [self.trigger(line, at_ns, number, path) for line, at_ns in posts]
-        times = [raw.at_ns for raw in raw_pres + raw_posts]
+        trigger = self.trigger
+        raws = [trigger(line, zero_ns + at_ns, number, path) for line, at_ns in pulses.at]
+        times = [raw.at_ns for raw in raws]
+        last_ns = max(times)
         self._pairings.append(
-            _RawPairing(
-                pathway,
-                block,
-                path,
-                raw_pres,
-                raw_posts,
-                pairs,
-                may_interleave,
-                min(times),
-                max(times),
-            )
+            _RawPairing(pathway, block, path, raws, pulses, may_interleave, min(times), last_ns)
         )
         if step is not None:
-            self.trigger(step, max(times) + step_after_ns, None, path)
+            trigger(step, last_ns + step_after_ns, None, path)
 
     def finish(
         self, first_trigger: int, first_pairing: int
@@ -95,6 +100,7 @@ class PhaseBuilder:
         """Return the phase's triggers and pairings, numbered in the order of time."""
         self._triggers.sort(key=lambda raw: (raw.at_ns, raw.line.name))
         self._check_lines()
+        self._check_steps()
         order = sorted(range(len(self._pairings)), key=lambda n: self._pairings[n].first_ns)
         self._check_pairings(order)
         ids = {n: first_pairing + k for k, n in enumerate(order)}
@@ -114,11 +120,14 @@ class PhaseBuilder:
         pairings = []
         for n in order:
             raw_pairing = self._pairings[n]
+            raws, given = raw_pairing.raws, raw_pairing.pulses.pairs
             pairs = tuple(
-                PlanSpikePair(k, raw_pairing.pres[i].id, raw_pairing.posts[j].id, target_dt_ns)
-                for k, (i, j, target_dt_ns) in enumerate(raw_pairing.pairs, 1)
+                [
+                    PlanSpikePair(k, raws[i].id, raws[j].id, target_dt_ns)
+                    for k, (i, j, target_dt_ns) in enumerate(given, 1)
+                ]
             )
-            targets = {pair.target_dt_ns for pair in pairs}
+            targets = {target_dt_ns for _, _, target_dt_ns in given}
             pairings.append(
                 PlanPairing(
                     ids[n],
@@ -153,6 +162,30 @@ class PhaseBuilder:
                     f"{self._where}: {raw.path}: two pulses on {raw.line.name} are "
                     f"{gap_ns / 1e3:g} us apart at {raw.at_ns / 1e6:.3f} ms of the phase; the box "
                     f"needs {self._min_spacing_ns / 1e3:g} us."
+                )
+
+    def _check_steps(self) -> None:
+        """Refuse a test step in the response to a stimulus, whoever gave that."""
+        step: _Raw | None = None
+        stimulus: _Raw | None = None
+        for raw in self._triggers:
+            over: tuple[_Raw, _Raw] | None = None
+            if raw.line.drives == "step":
+                step = raw
+                # Each was rounded to the grid by itself.
+                if stimulus and raw.at_ns < stimulus.at_ns + self._clear_ns - self._tick_ns:
+                    over = step, stimulus
+            else:
+                stimulus = raw
+                if step and raw.at_ns < step.at_ns + step.line.width_ns:
+                    over = step, stimulus
+            if over:
+                at_ms, by_ms = over[0].at_ns / 1e6, over[1].at_ns / 1e6
+                raise InputError(
+                    f"{self._where}: {over[0].path}: the test step at {at_ms:.3f} ms of the phase "
+                    f"meets the response to {over[1].line.name} at {by_ms:.3f} ms "
+                    f"({over[1].path}): set step = false, or leave {self._clear_ns / 1e6:g} ms "
+                    f"before a step and its {over[0].line.width_ns / 1e6:g} ms free."
                 )
 
     def _check_pairings(self, order: list[int]) -> None:

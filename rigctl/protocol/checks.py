@@ -3,10 +3,20 @@
 from __future__ import annotations
 
 import itertools
+from typing import get_args
 
 from rigctl.errors import InputError, nearest
+from rigctl.protocol.patterns import LEAST_DT_NS, dt_ranges_us
 from rigctl.protocol.rig import Rig
-from rigctl.protocol.schema import Contingent, Induction, Pairings, Poisson, Protocol
+from rigctl.protocol.schema import (
+    Contingent,
+    Induction,
+    Pairings,
+    Poisson,
+    PostReference,
+    PreReference,
+    Protocol,
+)
 
 
 def check_protocol(protocol: Protocol, where: str) -> None:
@@ -40,9 +50,25 @@ def check_protocol(protocol: Protocol, where: str) -> None:
                     test.first_at_s,
                     f"less than every_s = {test.every_s:g} is needed",
                 )
+    _check_arms(protocol, where)
+
+
+def _check_arms(protocol: Protocol, where: str) -> None:
     across = protocol.across_cells
-    if across is not None and any(dt == 0 for dt in across.dt_ms):
-        raise InputError.at(where, "across_cells.dt_ms", 0, _ZERO)
+    if across is None:
+        return
+    for n, dt_ms in enumerate(across.dt_ms, 1):
+        if _no_order(dt_ms):
+            raise InputError.at(where, f"across_cells.dt_ms[{n}]", dt_ms, _ZERO)
+    blocks = [b for p in protocol.phases if isinstance(p, Induction) for b in p.blocks]
+    if not any(isinstance(b, Pairings) and b.dt_ms is not None for b in blocks):
+        raise InputError(
+            f"{where}: across_cells: no pairings block states dt_ms, so all arms would be the same."
+        )
+
+
+def _no_order(dt_ms: float | None) -> bool:
+    return dt_ms is not None and abs(dt_ms) * 1e6 < LEAST_DT_NS
 
 
 _ZERO = "Δt = 0 has no order: give it a sign, at least 0.001 ms"
@@ -68,7 +94,7 @@ def _check_pairings(block: Pairings, where: str, path: str) -> None:
             f"{where}: {path}: give exactly one of dt_ms, dt_random, and pre_at_ms with "
             f"post_at_ms; given: {given}."
         )
-    if block.dt_ms == 0:
+    if _no_order(block.dt_ms):
         raise InputError.at(where, f"{path}.dt_ms", block.dt_ms, _ZERO)
     if block.dt_random is not None:
         _check_random(block, where, path)
@@ -111,6 +137,13 @@ def _check_random(block: Pairings, where: str, path: str) -> None:
             random.min_abs_ms,
             "nothing between low_ms and high_ms is left",
         )
+    if not dt_ranges_us(random):
+        raise InputError.at(
+            where,
+            f"{path}.dt_random.high_ms",
+            random.high_ms,
+            f"no Δt of a whole us other than 0 lies between low_ms = {random.low_ms:g} and this",
+        )
     if block.pre_count > 1 or block.post_count > 1:
         raise InputError(f"{where}: {path}.dt_random: for single pre and post events only.")
 
@@ -128,6 +161,10 @@ def _check_long_form(block: Pairings, where: str, path: str) -> None:
     pre, post = len(block.pre_at_ms), len(block.post_at_ms)
     if pre + post == 0:
         raise InputError(f"{where}: {path}: the pattern has no event at all.")
+    if (block.deliver == "pre" and not pre) or (block.deliver == "post" and not post):
+        raise InputError.at(
+            where, f"{path}.deliver", block.deliver, "the pattern has no event of this side"
+        )
     pairs = block.spike_pairs
     if pairs is None:
         if block.deliver == "both" and pre and post and pre != post and 1 not in (pre, post):
@@ -153,8 +190,8 @@ def _check_long_form(block: Pairings, where: str, path: str) -> None:
 def _check_poisson(block: Poisson, where: str, path: str) -> None:
     if block.shared_fraction > 0 and block.shared_dt_ms is None:
         raise InputError(f"{where}: {path}.shared_dt_ms: needed with shared_fraction above 0.")
-    if block.shared_dt_ms == 0:
-        raise InputError.at(where, f"{path}.shared_dt_ms", 0, _ZERO)
+    if _no_order(block.shared_dt_ms):
+        raise InputError.at(where, f"{path}.shared_dt_ms", block.shared_dt_ms, _ZERO)
     for key, rate in (("pre_rate_hz", block.pre_rate_hz), ("post_rate_hz", block.post_rate_hz)):
         if rate * block.dead_time_ms >= 1000:
             raise InputError.at(
@@ -178,10 +215,19 @@ def _check_contingent(block: Contingent, where: str, path: str, blocks: int) -> 
         raise InputError(f"{where}: {path}: a contingent block stands alone in its induction.")
 
 
+_EVENTS = [e for e in (*get_args(PreReference), *get_args(PostReference)) if e != "trigger"]
+
+
 def check_rig(rig: Rig, where: str) -> None:
     """Refuse what contradicts itself inside a rig file."""
     if not any(o.drives == "pre" for o in rig.outputs.values()):
         raise InputError(f"{where}: output: at least one line that drives pre is needed.")
+    steps = [name for name, output in rig.outputs.items() if output.drives == "step"]
+    if len(steps) > 1:
+        raise InputError(
+            f"{where}: output.{steps[1]}.drives: a rig has one line for the test step, and "
+            f"{steps[0]} is it already."
+        )
     for name, output in rig.outputs.items():
         path = f"output.{name}"
         if output.drives == "pre" and output.pathway is None:
@@ -202,6 +248,12 @@ def check_rig(rig: Rig, where: str) -> None:
                 f"the box makes pulses of at least {rig.box.min_width_us:g} us",
             )
         for event, latency in output.latency.items():
+            if event not in _EVENTS:
+                hint = nearest(event, _EVENTS)
+                raise InputError(
+                    f"{where}: {path}.latency: {event!r} is no reference event"
+                    f"{hint or ';'} {'Known' if hint else 'known'} here: {', '.join(_EVENTS)}."
+                )
             if latency.mean_ms < 0:
                 raise InputError.at(
                     where,

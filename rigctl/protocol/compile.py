@@ -11,7 +11,8 @@ import msgspec
 from rigctl.errors import InputError
 from rigctl.plasticity.sets import resolve
 from rigctl.protocol import patterns, poisson
-from rigctl.protocol.builder import PhaseBuilder
+from rigctl.protocol.budget import TriggerBudget
+from rigctl.protocol.builder import PhaseBuilder, Pulses
 from rigctl.protocol.plan import ContingentRule, Plan, PlanPhase, RuleChoice
 from rigctl.protocol.rig import Rig
 from rigctl.protocol.schema import (
@@ -27,7 +28,6 @@ from rigctl.protocol.washout import check_washout, washout_of
 from rigctl.protocol.wiring import Wiring
 
 PLAN_VERSION = 1
-MOST_TRIGGERS = 500_000
 # The test step begins this long after its stimulus: the response is over by then.
 STEP_AFTER_NS = 150_000_000
 # An induction is over this long after its last response window, so that tests resume at once.
@@ -69,6 +69,7 @@ class _Compiler:
         self._arm_dt_ms = self._arm(arm)
         self._wiring = Wiring(protocol, rig, protocol_file, rig_file)
         self._window_ns = patterns.to_ns(protocol.judging.response_window_ms)
+        self._budget = TriggerBudget(protocol_file)
         self._next_trigger = 1
         self._next_pairing = 1
         self._stream = 0
@@ -86,7 +87,7 @@ class _Compiler:
 
     def plan(self) -> Plan:
         protocol, rig = self._protocol, self._rig
-        self._count_first()
+        self._budget.count(protocol)
         phases = tuple(self._phase(n, phase) for n, phase in enumerate(protocol.phases))
         washout = washout_of(rig)
         check_washout(phases, washout, self._where, self._rig_file)
@@ -121,6 +122,7 @@ class _Compiler:
                 "stimuli": msgspec.to_builtins(rig.stimuli),
                 "electrodes": msgspec.to_builtins(rig.electrodes),
                 "limits": msgspec.to_builtins(limits),
+                "box": msgspec.to_builtins(box),
                 "approval": rig.approval,
                 "access": rig.access,
             },
@@ -144,41 +146,6 @@ class _Compiler:
             made[key] = found
         return tuple(made.values())
 
-    # --- counting before anything is expanded -----------------------------------------------
-
-    def _count_first(self) -> None:
-        """Refuse what would be far too long before any of it is made."""
-        total = 0.0
-        for n, phase in enumerate(self._protocol.phases, 1):
-            if isinstance(phase, Induction):
-                for m, block in enumerate(phase.blocks, 1):
-                    here = _expected_triggers(block)
-                    if here > MOST_TRIGGERS:
-                        key = "pairings" if isinstance(block, Pairings) else "duration_s"
-                        raise InputError.at(
-                            self._where,
-                            f"phase[{n}].block[{m}].{key}",
-                            getattr(block, key, 0),
-                            f"makes {here:,.0f} triggers; a plan has at most {MOST_TRIGGERS:,}",
-                        )
-                    total += here
-            else:
-                for m, test in enumerate(phase.tests, 1):
-                    here = 2 * phase.duration_min * 60 / test.every_s
-                    if here > MOST_TRIGGERS:
-                        raise InputError.at(
-                            self._where,
-                            f"phase[{n}].test[{m}].every_s",
-                            test.every_s,
-                            f"makes {here:,.0f} triggers; a plan has at most {MOST_TRIGGERS:,}",
-                        )
-                    total += here
-        if total > MOST_TRIGGERS:
-            raise InputError(
-                f"{self._where}: phase: {total:,.0f} triggers in all; a plan has at most "
-                f"{MOST_TRIGGERS:,}."
-            )
-
     # --- phases -----------------------------------------------------------------------------
 
     def _phase(self, index: int, phase: Phase) -> PlanPhase:
@@ -186,7 +153,7 @@ class _Compiler:
         builder = PhaseBuilder(
             self._rig.box.tick_ns,
             round(self._rig.box.min_spacing_us * 1000),
-            self._window_ns,
+            STEP_AFTER_NS,
             self._where,
         )
         rule: ContingentRule | None = None
@@ -197,7 +164,11 @@ class _Compiler:
             end_ns = round(phase.duration_min * 60 * _S)
             kind = phase.__struct_config__.tag  # type: ignore[assignment]
         for n, test in enumerate(phase.tests, 1):
-            self._tests(builder, test, end_ns, f"{path}.test[{n}]")
+            inside = f"{path}.test[{n}]"
+            if isinstance(phase, Induction):
+                # How long an induction lasts is known only now; the others are counted already.
+                self._budget.tests(test, end_ns, test.step is not False, inside)
+            self._tests(builder, test, end_ns, inside)
         triggers, pairings = builder.finish(self._next_trigger, self._next_pairing)
         self._next_trigger += len(triggers)
         self._next_pairing += len(pairings)
@@ -206,7 +177,7 @@ class _Compiler:
             phase.name,
             kind,  # type: ignore[arg-type]
             phase.start,
-            max(end_ns, builder.last_ns + self._window_ns),
+            max(end_ns, self._over_ns(builder)),
             triggers,
             pairings,
             rule,
@@ -229,8 +200,8 @@ class _Compiler:
         return None, builder.last_ns + self._window_ns + AFTER_LAST_NS
 
     def _tests(self, builder: PhaseBuilder, test: TestSeries, end_ns: int, path: str) -> None:
-        line = self._wiring.pre(test.pathway, None, path)
-        step = self._wiring.step() if test.step else None
+        line = self._wiring.pre(test.pathway, test.pre_line, path)
+        step = None if test.step is False else self._wiring.step(bool(test.step), path)
         every_ns = round(test.every_s * _S)
         at_ns = round(test.first_at_s * _S)
         # A test needs its response and its step inside the phase.
@@ -251,7 +222,7 @@ class _Compiler:
             pre = self._wiring.pre(block.pathway, block.pre_line, path)
         if block.deliver != "pre":
             post = self._wiring.post(block.post_line, path)
-        step = self._wiring.step() if block.step else None
+        step = self._wiring.step(True, path) if block.step else None
         pre_lead_ns = pre.latency_ns if pre else 0
         post_lead_ns = post.latency_ns if post else 0
         if block.offsets == "triggers":
@@ -279,19 +250,29 @@ class _Compiler:
         if block.offsets == "triggers":
             # What was written are triggers; the intended Δt is what the latencies make of them.
             raw_ns = (post.latency_ns if post else 0) - (pre.latency_ns if pre else 0)
+
+        def pulses_of(pattern: patterns.Pattern) -> Pulses:
+            patterns.check_order(pattern, raw_ns, self._where, path)
+            pre_at = [(pre, t - pre_lead_ns) for t in pattern.pre_ns] if pre else []
+            post_at = [(post, t - post_lead_ns) for t in pattern.post_ns] if post else []
+            pairs = [
+                (i, len(pre_at) + j, pattern.post_ns[j] - pattern.pre_ns[i] + raw_ns)
+                for i, j in pattern.pairs
+            ]
+            return Pulses((*pre_at, *post_at), tuple(pairs))
+
+        shared = pulses_of(made[0]) if fixed else None
         for n, pattern in enumerate(made):
-            zero_ns = start_ns + n * interval_ns + shift_ns
             builder.pairing(
                 block.pathway,
                 number,
                 path,
-                [(pre, zero_ns + t - pre_lead_ns) for t in pattern.pre_ns] if pre else [],
-                [(post, zero_ns + t - post_lead_ns) for t in pattern.post_ns] if post else [],
-                [(i, j, pattern.post_ns[j] - pattern.pre_ns[i] + raw_ns) for i, j in pattern.pairs],
+                start_ns + n * interval_ns + shift_ns,
+                shared or pulses_of(pattern),
                 step,
                 STEP_AFTER_NS,
             )
-        return start_ns + block.pairings * interval_ns if interval_ns else builder.last_ns
+        return max(start_ns + block.pairings * interval_ns, self._over_ns(builder))
 
     def _poisson(
         self, builder: PhaseBuilder, block: Poisson, number: int, start_ns: int, path: str
@@ -307,9 +288,11 @@ class _Compiler:
                 block.pathway,
                 number,
                 path,
-                [(pre, shift_ns + pre_ns[i] - pre.latency_ns)],
-                [(post, shift_ns + post_ns[j] - post.latency_ns)],
-                [(0, 0, post_ns[j] - pre_ns[i])],
+                shift_ns,
+                Pulses(
+                    ((pre, pre_ns[i] - pre.latency_ns), (post, post_ns[j] - post.latency_ns)),
+                    ((0, 1, post_ns[j] - pre_ns[i]),),
+                ),
                 None,
                 0,
                 may_interleave=True,
@@ -321,7 +304,11 @@ class _Compiler:
         for n, at_ns in enumerate(post_ns):
             if n not in tied_post:
                 builder.trigger(post, shift_ns + at_ns - post.latency_ns, None, path)
-        return start_ns + round(block.duration_s * _S)
+        return max(start_ns + round(block.duration_s * _S), self._over_ns(builder))
+
+    def _over_ns(self, builder: PhaseBuilder) -> int:
+        """Return when what has been added so far is over: pulses and the last response window."""
+        return max(builder.last_ns + self._window_ns, builder.free_ns)
 
     def _contingent(self, block: Contingent, path: str) -> ContingentRule:
         pre = self._wiring.pre(block.pathway, block.pre_line, path)
@@ -360,11 +347,3 @@ class _Compiler:
             duration_ns=round(block.max_min * 60 * _S),
             min_interval_ns=round(1e9 / rate_hz),
         )
-
-
-def _expected_triggers(block: Pairings | Poisson | Contingent) -> float:
-    if isinstance(block, Pairings):
-        return block.pairings * patterns.events_per_pairing(block)
-    if isinstance(block, Poisson):
-        return block.duration_s * (block.pre_rate_hz + block.post_rate_hz)
-    return block.max_pairings

@@ -6,6 +6,7 @@ allowed.
 
 from __future__ import annotations
 
+import json
 import math
 import re
 import tomllib
@@ -21,8 +22,15 @@ from rigctl.protocol.schema import Protocol
 T = TypeVar("T", Protocol, Rig)
 
 _AT = re.compile(r"^(?P<what>.*?)(?: - at `(?P<path>.*)`)?$", re.DOTALL)
-_UNKNOWN_KEY = re.compile(r"Object contains unknown field `(?P<key>.*)`")
-_MISSING_KEY = re.compile(r"Object missing required field `(?P<key>.*)`")
+_UNKNOWN_KEY = re.compile(r"Object contains unknown field `(?P<key>.*)`", re.DOTALL)
+_MISSING_KEY = re.compile(r"Object missing required field `(?P<key>.*)`", re.DOTALL)
+_BARE_KEY = re.compile(r"[A-Za-z0-9_-]+")
+# Deeper than any file of ours. The TOML reader's time grows with the square of a dotted key's
+# length, so such a key is refused before it is read.
+_MOST_DEPTH = 32
+_LONG_KEY = re.compile(
+    rf"(?:^|[{{,])[ \t]*\[*[ \t]*(?:[\w\"'-]+[ \t]*\.[ \t]*){{{_MOST_DEPTH}}}", re.MULTILINE
+)
 
 
 def parse_protocol(text: str, where: str) -> Protocol:
@@ -52,12 +60,24 @@ def parse_rig(text: str, where: str) -> Rig:
 
 
 def _parse(text: str, where: str, cls: type[T], what: str) -> T:
+    # Some editors put a byte order mark in front.
+    text = text.removeprefix("\ufeff")
     if not text.strip():
         raise InputError(f"{where}: the file is empty; {what} in TOML is needed.")
+    too_deep = InputError(f"{where}: nested more than {_MOST_DEPTH} deep: not {what}.")
+    if _LONG_KEY.search(text):
+        raise too_deep
     try:
         raw = tomllib.loads(text)
     except tomllib.TOMLDecodeError as error:
         raise InputError(f"{where}: not TOML: {error}.") from None
+    except RecursionError:
+        raise too_deep from None
+    except ValueError:
+        # Python reads no whole number of more than some thousand digits.
+        raise InputError(f"{where}: a number in it has thousands of digits.") from None
+    if _depth(raw) > _MOST_DEPTH:
+        raise too_deep
     _refuse_not_finite(raw, where, "")
     try:
         return msgspec.convert(raw, cls)
@@ -65,11 +85,32 @@ def _parse(text: str, where: str, cls: type[T], what: str) -> T:
         raise _sentence(str(error), raw, where, cls) from None
 
 
+def _depth(raw: Any) -> int:
+    """Return how deeply tables and lists are nested, without recursion."""
+    depth, level = 0, [raw]
+    while level and depth <= _MOST_DEPTH:
+        inner: list[Any] = []
+        for value in level:
+            if isinstance(value, dict):
+                inner += value.values()
+            elif isinstance(value, list):
+                inner += value
+        level = [value for value in inner if isinstance(value, dict | list)]
+        depth += 1
+    return depth
+
+
+def _quoted(key: str) -> str:
+    """Return a key as TOML writes it: bare, or quoted with its control characters escaped."""
+    return key if _BARE_KEY.fullmatch(key) else json.dumps(key)
+
+
 def _refuse_not_finite(value: Any, where: str, path: str) -> None:
     """TOML has nan and inf; no key takes them."""
     if isinstance(value, dict):
         for key, inner in value.items():
-            _refuse_not_finite(inner, where, f"{path}.{key}" if path else key)
+            name = _quoted(key)
+            _refuse_not_finite(inner, where, f"{path}.{name}" if path else name)
     elif isinstance(value, list):
         for n, inner in enumerate(value, 1):
             _refuse_not_finite(inner, where, f"{path}[{n}]")
@@ -89,7 +130,7 @@ def _sentence(message: str, raw: Any, where: str, cls: type[Any]) -> InputError:
         known = _keys_of(_resolve(kind, value))
         hint = nearest(unknown["key"], known)
         return InputError(
-            f"{where}: {inside}{unknown['key']}: there is no such key"
+            f"{where}: {inside}{_quoted(unknown['key'])}: there is no such key"
             f"{hint or ';'} {'Known' if hint else 'known'} here: {', '.join(known)}."
         )
     missing = _MISSING_KEY.match(what)
@@ -137,7 +178,7 @@ def _shown(steps: list[str | int]) -> str:
         if isinstance(step, int):
             shown += f"[{step + 1}]"
         else:
-            shown += f".{step}" if shown else step
+            shown += f".{_quoted(step)}" if shown else _quoted(step)
     return shown
 
 

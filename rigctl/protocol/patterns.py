@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import math
 from collections.abc import Iterator
 
 import numpy as np
@@ -11,6 +12,8 @@ from rigctl.errors import InputError
 from rigctl.protocol.schema import Pairings, RandomDt, Repeat
 
 _MS = 1_000_000
+# A Δt under a microsecond has no order that anybody could measure.
+LEAST_DT_NS = 1_000
 
 
 class Pattern(Struct, frozen=True):
@@ -59,6 +62,17 @@ def pattern_of(block: Pairings, dt_ms: float | None, where: str, path: str) -> P
     return pattern
 
 
+def check_order(pattern: Pattern, raw_ns: int, where: str, path: str) -> None:
+    """Refuse a spike pair whose Δt, ``raw_ns`` added, is too small to have a sign."""
+    for i, j in pattern.pairs:
+        if abs(pattern.post_ns[j] - pattern.pre_ns[i] + raw_ns) < LEAST_DT_NS:
+            raise InputError(
+                f"{where}: {path}: pre event {i + 1} and post event {j + 1} of a pairing are a "
+                "spike pair with Δt = 0, which has no order: move one of them, or say in "
+                "spike_pairs which events belong together."
+            )
+
+
 def _train(first_ms: float, count: int, rate_hz: float | None) -> list[int]:
     interval_ms = 1000 / rate_hz if rate_hz else 0.0
     return [to_ns(first_ms + n * interval_ms) for n in range(count)]
@@ -93,12 +107,29 @@ def _repeated(pattern: Pattern, repeat: Repeat) -> Pattern:
 
 
 def random_dts_ms(random: RandomDt, seed: int, stream: int) -> Iterator[float]:
-    """Yield Δt, uniform between the bounds without the middle, to the microsecond."""
+    """Yield Δt, uniform over the whole microseconds between the bounds without the middle."""
     rng = np.random.default_rng([seed, stream])
+    ranges = dt_ranges_us(random)
+    total = sum(last - first + 1 for first, last in ranges)
     while True:
-        for dt_ms in np.round(rng.uniform(random.low_ms, random.high_ms, 256), 3):
-            if abs(dt_ms) >= random.min_abs_ms and dt_ms != 0:
-                yield float(dt_ms)
+        for drawn in rng.integers(0, total, 256).tolist():
+            for first, last in ranges:
+                if drawn <= last - first:
+                    yield (first + drawn) / 1000
+                    break
+                drawn -= last - first + 1
+
+
+def dt_ranges_us(random: RandomDt) -> list[tuple[int, int]]:
+    """Return the allowed Δt as (first, last) whole us: at most one range on each side of 0."""
+
+    def us(ms: float) -> float:
+        return round(ms * 1000, 6)
+
+    low, high = math.ceil(us(random.low_ms)), math.floor(us(random.high_ms))
+    gap = max(math.ceil(us(random.min_abs_ms)), LEAST_DT_NS // 1000)
+    ranges = [(low, min(-gap, high)), (max(gap, low), high)]
+    return [(first, last) for first, last in ranges if first <= last]
 
 
 def interval_ns(block: Pairings) -> int:
@@ -112,6 +143,7 @@ def events_per_pairing(block: Pairings) -> int:
     """Return how many triggers one pairing has, without expanding it."""
     pre = len(block.pre_at_ms) if block.pre_at_ms is not None else block.pre_count
     post = len(block.post_at_ms) if block.post_at_ms is not None else block.post_count
+    pre, post = pre * (block.deliver != "post"), post * (block.deliver != "pre")
     times = 1
     for repeat in block.repeat:
         times *= repeat.times

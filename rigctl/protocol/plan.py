@@ -44,7 +44,7 @@ class PlanInput(Struct, frozen=True):
     blind_after_pre_ns: int
 
 
-class PlanTrigger(Struct, frozen=True, array_like=True):
+class PlanTrigger(Struct, frozen=True, array_like=True, gc=False):
     """One pulse. ``at_ns`` is relative to the phase's start and lies on the box's tick grid."""
 
     id: int
@@ -55,7 +55,7 @@ class PlanTrigger(Struct, frozen=True, array_like=True):
     pathway: str | None
 
 
-class PlanSpikePair(Struct, frozen=True, array_like=True):
+class PlanSpikePair(Struct, frozen=True, array_like=True, gc=False):
     """One intended Δt: which triggers bring its two events about, ``k`` counted from 1."""
 
     k: int

@@ -76,8 +76,10 @@ class TestSeries(Struct, frozen=True, forbid_unknown_fields=True):
     every_s: PositiveS = 10.0
     first_at_s: NonNegativeS = 0.0
     step: Annotated[
-        bool, Meta(description="trigger the test current step in each of these sweeps")
-    ] = True
+        bool | None,
+        Meta(description="the test current step in each sweep; default: where the rig has one"),
+    ] = None
+    pre_line: Name | None = None
 
 
 class Repeat(Struct, frozen=True, forbid_unknown_fields=True):

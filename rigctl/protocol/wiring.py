@@ -86,11 +86,16 @@ class Wiring:
             )
         return self._line(spiking[0], "post")
 
-    def step(self) -> PlanLine | None:
-        """Return the line of the test step, where the rig has one."""
+    def step(self, needed: bool, path: str) -> PlanLine | None:
+        """Return the line of the test step, where the rig has one; refuse if it is asked for."""
         for name, output in self._rig.outputs.items():
             if output.drives == "step":
                 return self._line(name, "step")
+        if needed:
+            raise InputError(
+                f"{self._protocol_file}: {path}.step = true: {self._rig_file} has no output that "
+                "drives step."
+            )
         return None
 
     def used(self) -> tuple[PlanLine, ...]:

@@ -7,7 +7,7 @@ import pytest
 from rigctl.errors import InputError
 from rigctl.protocol.compile import compile_plan
 from rigctl.protocol.load import parse_protocol, parse_rig
-from tests.conftest import RIG_TEXT, SHORT, make_plan, make_rig
+from tests.conftest import EXAMPLES, RIG_TEXT, SHORT, make_plan, make_rig
 
 # (what to replace, by what, the sentence after "p.toml: ")
 PROTOCOL_CASES = [
@@ -105,6 +105,48 @@ PROTOCOL_CASES = [
      'set = "bi-poo-2001"', "forecast[2]: pair-all with the set bi-poo-2001 stands twice; a "
      "session keeps one forecast of each."),
     ('set = "bi-poo-2001"', "a_plus = 0.1", None),
+    # What the TOML reader itself does not take.
+    (SHORT, "a = " + "[" * 100_000, "nested more than 32 deep: not a protocol."),
+    (SHORT, "a = " + "{a = " * 50_000, "nested more than 32 deep: not a protocol."),
+    (SHORT, "a = " + "[" * 40 + "]" * 40, "nested more than 32 deep: not a protocol."),
+    (SHORT, "a" + ".a" * 50_000 + " = 1", "nested more than 32 deep: not a protocol."),
+    ("pairings = 12", "pairings = " + "9" * 5000, "a number in it has thousands of digits."),
+    (SHORT, "\ufeff" + SHORT, None),
+    (SHORT, SHORT.replace("\n", "\r\n"), None),
+    ("pairings = 12", 'pairings = 12\n"a\\nb" = 1', 'phase[2].block[1]."a\\nb": there is no such '
+     "key; known here: kind, "),
+    ('title = "short"', '"\\u001b[31m" = 1', '"\\u001b[31m": there is no such key; known here: '),
+    ("pairings = 12", 'pairings = 12\n"a\\nb" = nan', 'phase[2].block[1]."a\\nb" = nan: a finite '),
+    # Δt without an order, by each road that leads there.
+    ("dt_ms = 10", "dt_ms = 1e-9", "phase[2].block[1].dt_ms = 1e-09: Δt = 0 has no order: give it "
+     "a sign, at least 0.001 ms."),
+    ("dt_ms = 10", "pre_at_ms = [0]\npost_at_ms = [0]", "phase[2].block[1]: pre event 1 and post "
+     "event 1 of a pairing are a spike pair with Δt = 0, which has no order: move one of them, or "
+     "say in spike_pairs which events belong together."),
+    ("dt_ms = 10", "dt_ms = 50\npre_count = 2\npre_rate_hz = 20", "phase[2].block[1]: pre event 2 "
+     "and post event 1 of a pairing are a spike pair with Δt = 0, "),
+    ("dt_ms = 10", 'dt_ms = -0.8\noffsets = "triggers"', "phase[2].block[1]: pre event 1 and post "
+     "event 1 of a pairing are a spike pair with Δt = 0, "),
+    ("dt_ms = 10", "dt_random = { low_ms = -0.0001, high_ms = 0.0001 }", "phase[2].block[1]."
+     "dt_random.high_ms = 0.0001: no Δt of a whole us other than 0 lies between low_ms = -0.0001 "
+     "and this."),
+    ("[[phase]]", "[across_cells]\ndt_ms = [5, 0]\n[[phase]]", "across_cells.dt_ms[2] = 0.0: Δt = "
+     "0 has no order: give it a sign, at least 0.001 ms."),
+    ("dt_ms = 10", 'pre_at_ms = []\npost_at_ms = [1]\ndeliver = "pre"', "phase[2].block[1].deliver "
+     "= 'pre': the pattern has no event of this side."),
+    ("dt_ms = 10", 'pre_at_ms = [1]\npost_at_ms = []\ndeliver = "post"', "phase[2].block[1]."
+     "deliver = 'post': the pattern has no event of this side."),
+    # The test step keeps away from responses.
+    ("rate_hz = 1", "rate_hz = 2.5\nstep = true", "phase[2].block[1]: the test step at 159.200 ms "
+     "of the phase meets the response to pre1 at 400.000 ms (phase[2].block[1]): set step = false, "
+     "or leave 150 ms before a step and its 300 ms free."),
+    ("first_at_s = 2", "first_at_s = 0.1\nstep = false", "phase[1].test[1]: the test step at "
+     "150.000 ms of the phase meets the response to pre2 at 100.000 ms "
+     "(phase[1].test[2]): set step = false, "),
+    # Counted for what is delivered.
+    ("pairings = 12", 'pairings = 600_000\ndeliver = "pre"', "phase[2].block[1].pairings = 600000: "
+     "makes 600,000 triggers; a plan has at most 500,000."),
+    ("every_s = 4", "every_s = 1e-12", "phase[1].test[1].every_s = 1e-12: makes 60,"),
 ]  # fmt: skip
 
 
@@ -144,6 +186,11 @@ RIG_CASES = [
     ("width_us = 100\nstim", "width_us = nan\nstim", "output.pre1.width_us = nan: a finite number"),
     ("[input.spike1]", "[input.pre1]", "input.pre1: an output has this name already."),
     ('access = "ruptured"', 'access = "open"', "access = 'open': "),
+    ("latency.epsp_onset = { mean_ms = 2.30", "latency.epsp_onse = { mean_ms = 2.30",
+     "output.pre1.latency: 'epsp_onse' is no reference event; did you mean \"epsp_onset\"? Known "
+     "here: epsp_onset, presynaptic_spike, field_epsp_onset, spike_peak, spike_threshold."),
+    ("[input.spike1]", '[output.step2]\ndrives = "step"\nwidth_us = 300_000\n[input.spike1]',
+     "output.step2.drives: a rig has one line for the test step, and step1 is it already."),
 ]  # fmt: skip
 
 
@@ -182,3 +229,36 @@ max_min = 1
         plan(-2.54)
     with pytest.raises(InputError, match="a negative Δt is needed"):
         plan(8)
+
+
+def test_arms_that_would_all_be_the_same_are_refused() -> None:
+    text = SHORT.replace("[[phase]]", "[across_cells]\ndt_ms = [5, -5]\n[[phase]]", 1)
+    make_plan(text)
+    with pytest.raises(InputError, match="no pairings block states dt_ms"):
+        make_plan(text.replace("dt_ms = 10", "pre_at_ms = [0]\npost_at_ms = [5]"))
+
+
+@pytest.mark.parametrize(
+    ("old", "new", "sentence"),
+    [
+        ("pairings = 12", "pairings = 12\nstep = true", r"phase\[2\].block\[1\].step = true"),
+        ("every_s = 4", "every_s = 4\nstep = true", r"phase\[1\].test\[1\].step = true"),
+        ("every_s = 4", "every_s = 4", None),
+    ],
+)
+def test_a_step_that_is_asked_for_needs_its_line(old: str, new: str, sentence: str | None) -> None:
+    start, end = RIG_TEXT.index("[output.step1]"), RIG_TEXT.index("[input.spike1]")
+    rig = parse_rig(RIG_TEXT[:start] + RIG_TEXT[end:], "rig.toml")
+    text = SHORT.replace(old, new, 1)
+    if sentence is None:
+        assert {line.drives for line in make_plan(text, rig).lines} == {"pre", "post"}
+        return
+    with pytest.raises(InputError, match=sentence + ": rig.toml has no output that drives step"):
+        make_plan(text, rig)
+
+
+def test_a_contingent_block_makes_no_triggers_of_its_own() -> None:
+    text = (EXAMPLES / "contingent.toml").read_text(encoding="utf-8")
+    plan = make_plan(text.replace("max_pairings = 150", "max_pairings = 600_000"))
+    assert plan.phases[1].rule is not None
+    assert plan.phases[1].triggers == ()

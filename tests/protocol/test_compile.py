@@ -14,6 +14,7 @@ from rigctl.protocol.compile import compile_plan
 from rigctl.protocol.load import parse_protocol, parse_rig
 from rigctl.protocol.plan import Plan
 from tests.conftest import EXAMPLES, RIG_TEXT, SHORT, make_plan, make_rig
+from tests.protocol.sound import check_plan
 
 EXAMPLE_FILES = sorted(EXAMPLES.glob("*.toml"))
 OWN_RIG = {"light": "light", "in_vivo_sensory": "in_vivo"}
@@ -29,36 +30,10 @@ def example_plan(path: Path) -> Plan:
     return compile_plan(protocol, rig, protocol_file=path.name, rig_file="rig.toml")
 
 
-def _check_plan(plan: Plan) -> None:
-    lines = {line.name: line for line in plan.lines}
-    ids = [t.id for phase in plan.phases for t in phase.triggers]
-    assert ids == list(range(1, len(ids) + 1))
-    pairings = [p.id for phase in plan.phases for p in phase.pairings]
-    assert pairings == list(range(1, len(pairings) + 1))
-    for phase in plan.phases:
-        by_id = {t.id: t for t in phase.triggers}
-        free_ns: dict[str, int] = {}
-        for before, after in zip(phase.triggers, phase.triggers[1:], strict=False):
-            assert (before.at_ns, before.line) <= (after.at_ns, after.line)
-        for t in phase.triggers:
-            assert t.at_ns >= 0
-            assert t.at_ns % plan.tick_ns == 0
-            assert t.at_ns >= free_ns.get(t.line, 0)
-            free_ns[t.line] = t.at_ns + t.width_ns
-            assert t.at_ns + t.width_ns <= phase.duration_ns
-        for pairing in phase.pairings:
-            for pair in pairing.pairs:
-                pre, post = by_id[pair.pre_trigger], by_id[pair.post_trigger]
-                dt_ns = (post.at_ns + lines[post.line].latency_ns) - (
-                    pre.at_ns + lines[pre.line].latency_ns
-                )
-                assert abs(dt_ns - pair.target_dt_ns) <= plan.tick_ns
-
-
 @pytest.mark.parametrize("path", EXAMPLE_FILES, ids=lambda p: p.stem)
 def test_every_example_compiles_into_a_sound_plan(path: Path) -> None:
     plan = example_plan(path)
-    _check_plan(plan)
+    check_plan(plan)
     assert plan.hash() == example_plan(path).hash()
 
 
@@ -256,4 +231,4 @@ def test_any_delta_t_and_latencies_give_a_sound_plan(
             f"pairings = 12\npre_count = {count}\npre_rate_hz = 20\n"
             f"post_count = {count}\npost_rate_hz = 20",
         )
-    _check_plan(make_plan(protocol, rig))
+    check_plan(make_plan(protocol, rig))
