@@ -241,10 +241,10 @@ class _Compiler:
         ]
         if post is not None and not post.evokes_spike:
             made = [patterns.Pattern(p.pre_ns, p.post_ns, ()) for p in made]
-        # One shift for the whole block keeps its rhythm: the earliest trigger comes at its start.
+        # One shift for the whole block keeps its rhythm: its first trigger comes at its start.
+        # Later pairings follow it, or are refused as overlapping.
         shift_ns = -min(
-            min([t - pre_lead_ns for t in p.pre_ns] + [t - post_lead_ns for t in p.post_ns])
-            for p in (made[:1] if fixed else made)
+            [t - pre_lead_ns for t in made[0].pre_ns] + [t - post_lead_ns for t in made[0].post_ns]
         )
         raw_ns = 0
         if block.offsets == "triggers":

@@ -24,6 +24,6 @@ else:
 
 
 NOT_COMPILED = (
-    "The conductance cell runs uncompiled, about twenty times slower: install the extra `fast` "
+    "The conductance cell runs uncompiled, about forty times slower: install the extra `fast` "
     "(pip install 'rigctl[fast]') to have it compiled."
 )

@@ -97,7 +97,8 @@ class ConductanceKnobs(Knobs, frozen=True):
     rise_ms: Annotated[float, Meta(gt=0, le=100, description="… of the conductance's rise")] = 0.5
     decay_ms: Annotated[float, Meta(gt=0, le=1_000, description="… of its decay")] = 4.0
     capacitance_pf: Annotated[
-        float, Meta(gt=1, le=10_000, description="of the whole cell; scales all currents")
+        float,
+        Meta(gt=1, le=10_000, description="of the whole cell; scales its conductances and EPSPs"),
     ] = 100.0
     holding_pa: Annotated[
         float, Meta(ge=-10_000, le=10_000, description="constant current through the electrode")

@@ -2,9 +2,10 @@
 
 Depression is that of Tsodyks & Markram 1997 (PNAS 94:719): recovered, active and inactive
 fractions; a release uses ``use`` of what has recovered. Release is binomial over ``sites``, each
-vesicle with its own size. The hidden rule is the efficacy-suppression form of Froemke & Dan 2002
-(Nature 416:433), multiplied in, with parameters drawn per seed around the published ones; what it
-decides shows only over minutes, and less the longer the cell has been dialysed.
+vesicle with its own size: at rest (1 − use)^sites of the events fail. The hidden rule is the
+efficacy-suppression form of Froemke & Dan 2002 (Nature 416:433), multiplied in, with parameters
+drawn per seed around the published ones; what it decides shows only over minutes, and less the
+longer the cell has been dialysed: break-in is where world time is 0.
 """
 
 from __future__ import annotations
@@ -42,8 +43,13 @@ class Depression:
             inact = math.exp(-gone_s / self._tau_inact_s) if self._tau_inact_s else 0.0
             # Exact solution between events: active decays, inactive recovers.
             inactive = 1.0 - self._recovered - self._active
-            ratio = self._tau_rec_s / (self._tau_rec_s - self._tau_inact_s)
-            inactive = inactive * rec + self._active * ratio * (rec - inact)
+            apart_s = self._tau_rec_s - self._tau_inact_s
+            if abs(apart_s) > 1e-9 * self._tau_rec_s:
+                passed_on = self._tau_rec_s / apart_s * (rec - inact)
+            else:
+                # The limit of the line above, which is 0/0 where the two are equal.
+                passed_on = gone_s / self._tau_rec_s * rec
+            inactive = inactive * rec + self._active * passed_on
             self._active *= inact
             self._recovered = 1.0 - inactive - self._active
         self._at_s = at_s

@@ -28,6 +28,10 @@ def check_plan(plan: Plan) -> None:
         for pairing in phase.pairings:
             own = [t.at_ns for t in phase.triggers if t.pairing == pairing.id]
             assert (min(own), max(own)) == (pairing.first_ns, pairing.last_ns)
+            named = {(pair.pre_trigger, pair.post_trigger) for pair in pairing.pairs}
+            assert len(named) == len(pairing.pairs)
+            targets = {pair.target_dt_ns for pair in pairing.pairs}
+            assert pairing.target_dt_ns == (targets.pop() if len(targets) == 1 else None)
             for pair in pairing.pairs:
                 pre, post = by_id[pair.pre_trigger], by_id[pair.post_trigger]
                 assert (lines[pre.line].drives, lines[post.line].drives) == ("pre", "post")

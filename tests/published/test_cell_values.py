@@ -27,13 +27,15 @@ def test_rest() -> None:
     assert (round(m, 5), round(h, 5), round(n, 5)) == (0.05296, 0.59599, 0.31773)
 
 
+# At 15 µA/cm² the rate is 78.649 Hz (two step sizes, and scipy's DOP853 at 1e-9, agree on that);
+# the table that these figures come from says 78.7, as if rounded twice. The others are as there.
 @pytest.mark.parametrize(
     ("current", "rate_hz"),
-    [(6.5, 55.1), (7, 58.3), (8, 62.5), (10, 68.3), (15, 78.7), (20, 86.5)],
+    [(6.5, 55.1), (7, 58.3), (8, 62.5), (10, 68.3), (15, 78.6), (20, 86.5)],
 )
 def test_firing_rates(current: float, rate_hz: float) -> None:
     crossings = upward_crossings_ms(respond(current, 600, 600))
-    assert 1000 / np.diff(crossings)[-1] == pytest.approx(rate_hz, abs=0.06)
+    assert round(1000 / float(np.diff(crossings)[-1]), 1) == rate_hz
 
 
 def test_first_spike() -> None:
@@ -44,17 +46,17 @@ def test_first_spike() -> None:
 
 def test_thresholds() -> None:
     one = _threshold(lambda i: len(upward_crossings_ms(respond(i, 60, 60))) >= 1, 2.0, 2.5)
-    assert one == pytest.approx(2.240, abs=1e-3)
+    assert round(one, 3) == 2.240
     sustained = _threshold(
         lambda i: bool((upward_crossings_ms(respond(i, 1500, 1500))[-1:] > 1470).any()), 6.2, 6.3
     )
-    assert sustained == pytest.approx(6.260, abs=1e-3)
+    assert round(sustained, 3) == 6.260
 
 
 @pytest.mark.parametrize(("pulse_ms", "current"), [(2, 3.859), (3, 2.928), (5, 2.351)])
 def test_pulse_thresholds(pulse_ms: float, current: float) -> None:
     found = _threshold(lambda i: len(upward_crossings_ms(respond(i, pulse_ms, 30))) >= 1, 2.0, 4.5)
-    assert found == pytest.approx(current, abs=1e-3)
+    assert round(found, 3) == current
 
 
 # Tsodyks & Markram 1997, PNAS 94:719 (U and τrec read second-hand; releases computed here from the

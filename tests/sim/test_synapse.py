@@ -6,7 +6,7 @@ import numpy as np
 import pytest
 
 from rigctl_sim.knobs import SynapseKnobs
-from rigctl_sim.synapse import SimSynapse
+from rigctl_sim.synapse import Depression, SimSynapse
 
 S = 1_000_000_000
 
@@ -20,11 +20,20 @@ def test_the_first_response_is_one_on_average_and_varies_binomially() -> None:
     assert first.var() == pytest.approx(variance, rel=0.15)
 
 
-def test_failures_of_transmission_are_zero() -> None:
-    synapse = SimSynapse(SynapseKnobs(sites=1, use=0.3), 1, "s1")
+@pytest.mark.parametrize("sites", [1, 3])
+def test_failures_of_transmission_are_zero_and_as_many_as_said(sites: int) -> None:
+    synapse = SimSynapse(SynapseKnobs(sites=sites, use=0.3), 1, "s1")
     strengths = [synapse.release(n * 10 * S) for n in range(1, 400)]
     failures = strengths.count(0.0) / len(strengths)
-    assert abs(failures - 0.7) < 5 * (0.21 / 399) ** 0.5
+    expected = 0.7**sites
+    assert abs(failures - expected) < 5 * (expected * (1 - expected) / 399) ** 0.5
+
+
+@pytest.mark.parametrize("tau_s", [0.003, 0.8])
+def test_recovery_may_be_as_fast_as_inactivation(tau_s: float) -> None:
+    equal, nearly = Depression(0.5, tau_s, tau_s), Depression(0.5, tau_s, tau_s * (1 + 1e-6))
+    for k in range(20):
+        assert equal.release(0.002 * k) == pytest.approx(nearly.release(0.002 * k), rel=1e-5)
 
 
 def _pair(synapse: SimSynapse, dt_ms: float, count: int) -> None:
